@@ -19,35 +19,35 @@
 namespace tailweir {
 
 enum class StopReason {
-  converged,         // residual <= tolerance
-  iteration_limit,   // max_iterations reached; the last iterate is returned
+  converged,              // residual <= tolerance
+  iteration_limit,        // max_iterations reached; the last iterate is returned
   not_positive_definite,  // samples span less than p dimensions, or an iterate failed to factorise
   not_finite              // a sample or an iterate holds a value that is not finite
 };
 
 struct FixedPointSettings {
-  double nu = 4;                          // > 0; > 1 when the centre is estimated
+  double nu = 4;  // > 0; > 1 when the centre is estimated
   CentreKind centre = CentreKind::zero;
-  Eigen::VectorXd given_centre;           // p values, for CentreKind::given
-  double tolerance = 1e-12;               // on the residual (affine-invariant distance), > 0
-  int max_iterations = 1000;              // >= 1
+  Eigen::VectorXd given_centre;  // p values, for CentreKind::given
+  double tolerance = 1e-12;      // on the residual (affine-invariant distance), > 0
+  int max_iterations = 1000;     // >= 1
 };
 
 struct FixedPoint {
   StopReason reason = StopReason::iteration_limit;
-  Eigen::MatrixXd scatter;   // p x p, symmetric positive definite (when converged)
-  Eigen::VectorXd centre;    // p
-  Eigen::ArrayXd weight;     // u(d_i), n
-  Eigen::ArrayXd distance;   // d_i, n, squared Mahalanobis at scatter and centre
-  double log_det = 0;        // ln det(scatter)
-  double residual = 0;       // estimated distance of the returned scatter to the fixed point
+  Eigen::MatrixXd scatter;  // p x p, symmetric positive definite (when converged)
+  Eigen::VectorXd centre;   // p
+  Eigen::ArrayXd weight;    // u(d_i), n
+  Eigen::ArrayXd distance;  // d_i, n, squared Mahalanobis at scatter and centre
+  double log_det = 0;       // ln det(scatter)
+  double residual = 0;      // estimated distance of the returned scatter to the fixed point
   int iterations = 0;
 };
 
 // samples: p x n, one sample a column, finite. mass: n non-negative values, any positive sum (they
 // are divided by it). start: optional p x p positive definite first iterate (empty: the scale-free
-// start described in the .cpp). On not_positive_definite and not_finite the matrices are unspecified
-// and must not be used. Allocates O(n p + p^2).
+// start described in the .cpp). On not_positive_definite and not_finite the matrices are
+// unspecified and must not be used. Allocates O(n p + p^2).
 FixedPoint fit_scatter(const Eigen::Ref<const Eigen::MatrixXd>& samples,
                        const Eigen::Ref<const Eigen::ArrayXd>& mass,
                        const FixedPointSettings& settings,
