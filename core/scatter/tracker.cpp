@@ -1,0 +1,742 @@
+#include "core/scatter/tracker.h"
+
+#include <algorithm>
+#include <cassert>
+#include <cmath>
+#include <limits>
+
+#include "core/scatter/weight.h"
+#include "core/spd/blas.h"
+
+namespace tailweir {
+namespace {
+
+constexpr double kNaN = std::numeric_limits<double>::quiet_NaN();
+// A scaled sample beyond this enters at this size in the same direction: u(d) x x' no longer
+// depends on the length there (relative difference nu/d), and nothing overflows.
+constexpr double kAbsurd = 1e30;
+// Condition number (scaled channels) beyond which a scatter is not published.
+constexpr double kWorstCondition = 1e12;
+// Whole iterations allowed at one sample: in exact mode, otherwise.
+constexpr int kExactIterations = 80;
+constexpr int kIterations = 3;
+// Samples a half-life keeps by default: 2 n_eff = 4/ln 2 half-lives.
+constexpr double kKeptHalfLives = 5.7707801635558535;
+// Work (multiply-adds) up to which a polish is done at one sample: under a millisecond.
+constexpr double kOneGo = 8e6;
+// Share of the statistical error below which a tolerance means exact at every sample.
+constexpr double kExactShare = .02;
+
+bool is_half_life(Memory::Kind kind) {
+  return kind == Memory::Kind::half_life_samples || kind == Memory::Kind::half_life_time;
+}
+
+double error_for(double p, double nu, double n) {
+  const double sigma1 = (p + nu + 2) / (p + nu);
+  const double sigma2 = 2 * (p + nu + 2) / (nu * (p + nu));
+  return std::sqrt((sigma1 * p * (p + 1) + sigma2 * p) / n);
+}
+
+double kept_half_lives(const TrackerSettings& settings, double nu) {
+  if (!is_half_life(settings.memory.kind)) return 0;
+  if (!(settings.tolerance > 0)) return kKeptHalfLives;
+  const double n = settings.memory.kind == Memory::Kind::half_life_samples
+                       ? 2.885 * settings.memory.length
+                       : 1000.;
+  const double share =
+      settings.tolerance / error_for(static_cast<double>(settings.channels), nu, std::max(n, 1.));
+  return std::clamp(std::log2(.5 / share), kKeptHalfLives, 45.);
+}
+
+// Slots the memory needs, or a first guess where only time bounds it.
+Index room_for(const TrackerSettings& settings, double kept) {
+  switch (settings.memory.kind) {
+    case Memory::Kind::window_samples:
+      return static_cast<Index>(settings.memory.length) + 1;
+    case Memory::Kind::half_life_samples:
+      return static_cast<Index>((kept + 2.9) * settings.memory.length) + 3;
+    default:
+      return 1024;
+  }
+}
+
+Index slack_for(Index dimension, Index room) {
+  const double work = Polish::cost(dimension, room, true);
+  if (work <= kOneGo) return 1;
+  return static_cast<Index>(16 + 6 * work / 2e6);
+}
+
+}  // namespace
+
+Tracker::Tracker(const TrackerSettings& settings, double nu)
+    : settings_(settings),
+      p_(settings.channels),
+      lift_(settings.centre.kind == CentreKind::estimated ? 1 : 0),
+      dimension_(p_ + lift_),
+      nu_(nu),
+      kept_half_lives_(kept_half_lives(settings, nu)),
+      ring_((dimension_ + 3) / 4 * 4, room_for(settings, kept_half_lives_),
+            slack_for(dimension_, room_for(settings, kept_half_lives_))),
+      precision_(dimension_),
+      offset_(Eigen::VectorXd::Zero(p_)),
+      unit_(Eigen::VectorXd::Ones(p_)),
+      polish_(dimension_, lift_),
+      scratch_(dimension_, dimension_),
+      block_(p_, p_) {
+  assert(nu > static_cast<double>(lift_));
+  const std::size_t padded = static_cast<std::size_t>(precision_.padded());
+  x_.assign(padded, 0);
+  y_.assign(padded, 0);
+  x_old_.assign(padded, 0);
+  y_old_.assign(padded, 0);
+  const Index room = room_for(settings, kept_half_lives_);
+  scratch_values_.assign(static_cast<std::size_t>(room), 0);
+  columns_.resize(dimension_, 64);
+  if (is_half_life(settings.memory.kind)) tail_.setZero(dimension_, dimension_);
+  if (settings.centre.kind == CentreKind::given) offset_ = settings.centre.given;
+  view_mass_.resize(room);
+  view_weight_.resize(room);
+  view_distance_.resize(room);
+  good_.resize(dimension_, dimension_);
+  good_offset_ = offset_;
+  good_unit_ = unit_;
+  const double n = steady_samples();
+  gauge_ = Gauge(static_cast<double>(p_), n, .12 * error_for(static_cast<double>(p_), nu, n));
+}
+
+double Tracker::steady_samples() const {
+  switch (settings_.memory.kind) {
+    case Memory::Kind::window_samples:
+      return settings_.memory.length;
+    case Memory::Kind::half_life_samples: {
+      const double lambda = std::exp2(-1 / settings_.memory.length);
+      return (1 + lambda) / (1 - lambda);
+    }
+    default:
+      return std::max(health_.samples_effective, 5. * static_cast<double>(dimension_));
+  }
+}
+
+double Tracker::statistical_error() const {
+  return error_for(static_cast<double>(p_), nu_, std::max(health_.samples_effective, 1.));
+}
+
+double Tracker::tolerance() const {
+  return settings_.tolerance > 0 ? settings_.tolerance : .2 * statistical_error();
+}
+
+bool Tracker::exact() const {
+  return settings_.tolerance > 0 && settings_.tolerance < kExactShare * statistical_error();
+}
+
+double Tracker::dot(const std::vector<double>& a, const double* b) const {
+  // Four partial sums in a fixed order: the same on every machine.
+  double s[4] = {0, 0, 0, 0};
+  for (std::size_t i = 0; i < a.size(); i += 4) {
+    for (std::size_t k = 0; k < 4; ++k) s[k] += a[i + k] * b[i + k];
+  }
+  return (s[0] + s[1]) + (s[2] + s[3]);
+}
+
+void Tracker::lift_into(const Eigen::Ref<const Eigen::VectorXd>& x) {
+  double largest = 0;
+  for (Index j = 0; j < p_; ++j) {
+    const double value = (x(j) - offset_(j)) / unit_(j);
+    x_[static_cast<std::size_t>(j)] = value;
+    largest = std::max(largest, std::abs(value));
+  }
+  if (lift_ == 1) x_[static_cast<std::size_t>(p_)] = 1;
+  shrink_ = 1;
+  if (state_ == TrackerState::filling || largest <= kAbsurd) return;
+  shrink_ = kAbsurd / largest;
+  for (Index j = 0; j < p_; ++j) x_[static_cast<std::size_t>(j)] *= shrink_;
+}
+
+double Tracker::omega_of(std::int64_t position, std::int64_t time_ns) const {
+  switch (settings_.memory.kind) {
+    case Memory::Kind::half_life_samples:
+      return std::exp2(static_cast<double>(position - base_position_) / settings_.memory.length);
+    case Memory::Kind::half_life_time:
+      return std::exp2(static_cast<double>(time_ns - base_time_) * 1e-9 / settings_.memory.length);
+    default:
+      return 1;
+  }
+}
+
+// Samples that leave a window when one of time `now` enters.
+Index Tracker::leaving(std::int64_t now) const {
+  if (settings_.memory.kind == Memory::Kind::window_samples) {
+    return static_cast<double>(ring_.size()) >= settings_.memory.length ? 1 : 0;
+  }
+  if (settings_.memory.kind != Memory::Kind::window_time) return 0;
+  Index count = 0;
+  while (count < ring_.size() &&
+         static_cast<double>(now - ring_.time(ring_.begin() + count)) * 1e-9 >=
+             settings_.memory.length) {
+    ++count;
+  }
+  return count;
+}
+
+double Tracker::predict(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time_ns) {
+  assert(x.size() == p_);
+  time_ = time_ns;
+  lift_into(x);
+  departing_ = leaving(time_ns);
+  probe_ = -1;
+  if (!tracking()) return kNaN;
+  if (departing_ > 0) {
+    const double* old = ring_.x(ring_.begin());
+    std::copy(old, old + x_old_.size(), x_old_.begin());
+    precision_.multiply(x_.data(), y_.data(), x_old_.data(), y_old_.data());
+    q_old_ = dot(x_old_, y_old_.data());
+    q_cross_ = dot(x_, y_old_.data());
+  } else {
+    probe();
+    if (probe_ >= 0) {
+      precision_.multiply(x_.data(), y_.data(), ring_.x(probe_), y_old_.data());
+    } else {
+      precision_.multiply(x_.data(), y_.data());
+    }
+  }
+  q_new_ = dot(x_, y_.data());
+  const double d = (q_new_ * total_ - static_cast<double>(lift_)) / (shrink_ * shrink_);
+  // A distance below zero is rounding; one that is not a number asks for a rebuild.
+  if (!std::isfinite(q_new_)) rebuild_wanted_ = true;
+  return std::isnan(d) ? kNaN : std::clamp(d, 0., 1e300);
+}
+
+// A half-life loses no sample that could tell how stale the weights are: ask one in the ring now
+// and then, spread by the golden ratio over those the last polish has seen.
+void Tracker::probe() {
+  if (!is_half_life(settings_.memory.kind) || polish_.active()) return;
+  const std::int64_t every =
+      std::max<std::int64_t>(1, static_cast<std::int64_t>(health_.samples_effective / 64));
+  if (exact() || health_.since_polish % every != every - 1) return;
+  const std::int64_t known = ring_.end() - health_.since_polish - ring_.begin();
+  if (known < 8) return;
+  const double turn = .6180339887498949 * static_cast<double>(health_.since_polish / every + 1);
+  // Recent samples carry the mass: look in the newest third of what is kept.
+  const double back = (turn - std::floor(turn)) * static_cast<double>(known) / 3;
+  probe_ = ring_.begin() + known - 1 - static_cast<std::int64_t>(back);
+}
+
+void Tracker::absorb() {
+  health_.iterations = 0;
+  ++taken_;
+  if (is_half_life(settings_.memory.kind)) {
+    const double exponent = std::log2(omega_of(ring_.end(), time_));
+    if (!(exponent < 400) || (exponent > 60 && !polish_.active())) renormalise();
+  }
+  if (!tracking()) {
+    for (Index k = 0; k < departing_; ++k) ring_.drop_oldest();
+    take_slot();
+    recount();
+    start_if_ready();
+    update_health();
+    return;
+  }
+  if (probe_ >= 0) {
+    const double q = dot(y_old_, ring_.x(probe_));
+    const double nu = nu_ - static_cast<double>(lift_);
+    const double p = static_cast<double>(dimension_);
+    const double u = (p + nu) / (nu + std::max(q * total_, 0.));
+    gauge_.observe(std::log(u * total_ / (mass_ * ring_.weight(probe_, current_))));
+  }
+  if (departing_ > 0) remove_first();
+  enter();
+  remove_others();
+  ++health_.since_polish;
+  check_samples_left();
+  if (tracking()) {
+    if (rebuild_wanted_) {
+      rebuild();
+    } else {
+      polish_if_due();
+    }
+  }
+  update_health();
+}
+
+void Tracker::take_slot() {
+  const std::int64_t position = ring_.append();
+  std::copy(x_.begin(), x_.end(), ring_.x(position));
+  ring_.time(position) = time_;
+  ring_.omega(position) = omega_of(position, time_);
+}
+
+// The oldest sample leaves with exactly what it brought; y_ and q_new_ become those of the new
+// sample without it.
+void Tracker::remove_first() {
+  const std::int64_t oldest = ring_.begin();
+  const double omega = ring_.omega(oldest);
+  const double w = ring_.weight(oldest, current_);
+  const double nu = nu_ - static_cast<double>(lift_);
+  const double p = static_cast<double>(dimension_);
+  const double u = (p + nu) / (nu + std::max(q_old_ * total_, 0.));
+  gauge_.observe(std::log(u * total_ / (mass_ * w)));
+  const double a = omega * w;
+  const double h = a * q_old_;
+  const double limit = std::min(.9, 3 * (p + nu) * omega / mass_);
+  if (!(h < limit)) rebuild_wanted_ = true;
+  ring_.drop_oldest();
+  if (!(h < .999)) return;  // the rebuild starts from the ring
+  const double g = a / (1 - h);
+  precision_.add(g, y_old_.data());
+  q_new_ += g * q_cross_ * q_cross_;
+  for (std::size_t i = 0; i < y_.size(); ++i) y_[i] += g * q_cross_ * y_old_[i];
+  log_det_ += std::log1p(-h);
+  const double scale = total_ / mass_;
+  mass_ -= omega;
+  mass_square_ -= omega * omega;
+  total_ -= a;
+  // The mean weight that judges the new sample is the one before this removal.
+  if (departing_ == 1) {
+    enter_scale_ = scale;
+  }
+}
+
+void Tracker::enter() {
+  const double scale = departing_ > 0 && enter_scale_ > 0 ? enter_scale_ : total_ / mass_;
+  enter_scale_ = 0;
+  take_slot();
+  const std::int64_t position = ring_.end() - 1;
+  const double omega = ring_.omega(position);
+  const double mass = mass_ + omega;
+  const double nu = nu_ - static_cast<double>(lift_);
+  const double p = static_cast<double>(dimension_);
+  const double d1 = q_new_ * scale * mass;
+  const double u = leave_one_out_weight(std::max(d1, 0.), omega * std::max(d1, 0.) / mass, nu, p);
+  const double w = u * scale;
+  const double a = omega * w;
+  const double gain = a * q_new_;
+  if (!std::isfinite(gain) || !(gain > -.5) || !(w > 0)) {
+    ring_.weight(position, current_) = std::isfinite(w) && w > 0 ? w : 1e-300;
+    rebuild_wanted_ = true;
+    mass_ = mass;
+    return;
+  }
+  ring_.weight(position, current_) = w;
+  precision_.add(-a / (1 + gain), y_.data());
+  log_det_ += std::log1p(gain);
+  total_ += a;
+  mass_ = mass;
+  mass_square_ += omega * omega;
+}
+
+// A time window may lose several samples at once: one pass each.
+void Tracker::remove_others() {
+  for (Index k = 1; k < departing_; ++k) {
+    const std::int64_t oldest = ring_.begin();
+    const double a = ring_.omega(oldest) * ring_.weight(oldest, current_);
+    std::copy(ring_.x(oldest), ring_.x(oldest) + x_old_.size(), x_old_.begin());
+    precision_.multiply(x_old_.data(), y_old_.data());
+    const double h = a * dot(x_old_, y_old_.data());
+    mass_ -= ring_.omega(oldest);
+    mass_square_ -= ring_.omega(oldest) * ring_.omega(oldest);
+    ring_.drop_oldest();
+    if (!(h < .9)) {
+      rebuild_wanted_ = true;
+      continue;
+    }
+    precision_.add(a / (1 - h), y_old_.data());
+    log_det_ += std::log1p(-h);
+    total_ -= a;
+  }
+}
+
+// A window that time has emptied, or a half-life after a long gap, cannot hold a scatter any more.
+void Tracker::check_samples_left() {
+  const double n = mass_ * mass_ / mass_square_;
+  if (n >= static_cast<double>(dimension_) + .5) return;
+  polish_.abandon();
+  state_ = TrackerState::filling;
+  retry_in_ = 0;
+}
+
+// Exact sums of omega over the ring and the tail.
+void Tracker::recount() {
+  mass_ = tail_mass_;
+  mass_square_ = tail_square_;
+  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
+    const double omega = ring_.omega(k);
+    mass_ += omega;
+    mass_square_ += omega * omega;
+  }
+}
+
+// Moves the sample whose omega is 1 to the newest, so that omega neither overflows nor wears out.
+void Tracker::renormalise() {
+  polish_.abandon();
+  const std::int64_t old_position = base_position_;
+  const std::int64_t old_time = base_time_;
+  base_position_ = ring_.end();
+  base_time_ = time_;
+  const double shift = settings_.memory.kind == Memory::Kind::half_life_samples
+                           ? static_cast<double>(old_position - base_position_)
+                           : static_cast<double>(old_time - base_time_) * 1e-9;
+  const double f = std::exp2(shift / settings_.memory.length);
+  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
+    ring_.omega(k) = omega_of(k, ring_.time(k));
+  }
+  tail_ *= f;
+  tail_total_ *= f;
+  tail_mass_ *= f;
+  tail_square_ *= f * f;
+  total_ *= f;
+  recount();
+  if (!tracking()) return;
+  if (!(f > 1e-250) || !(mass_ > 1e-200)) {  // everything before is forgotten
+    state_ = TrackerState::filling;
+    retry_in_ = 0;
+    departing_ = 0;
+    tail_.setZero();
+    tail_total_ = tail_mass_ = tail_square_ = 0;
+    ring_.clear();
+    return;
+  }
+  precision_.scale(1 / f);
+  for (double& value : y_) value /= f;
+  q_new_ /= f;
+  probe_ = -1;
+  log_det_ += static_cast<double>(dimension_) * std::log(f);
+}
+
+// Puts samples beyond what a half-life keeps into E, with the weights they have.
+void Tracker::retire_tail() {
+  if (!is_half_life(settings_.memory.kind)) return;
+  const double newest = ring_.omega(ring_.end() - 1);
+  const double least = newest * std::exp2(-kept_half_lives_);
+  const double normal = mass_ / total_;  // to the scale of weights with mean 1
+  Index count = 0;
+  while (ring_.size() > 1 && ring_.omega(ring_.begin()) < least) {
+    const std::int64_t oldest = ring_.begin();
+    const double omega = ring_.omega(oldest);
+    const double a = omega * ring_.weight(oldest, current_) * normal;
+    const Eigen::Map<const Eigen::VectorXd> x(ring_.x(oldest), dimension_);
+    columns_.col(count++) = std::sqrt(a) * x;
+    tail_total_ += a;
+    tail_mass_ += omega;
+    tail_square_ += omega * omega;
+    ring_.drop_oldest();
+    if (count == columns_.cols()) {
+      spd::add_gram(1, columns_, 1, tail_);
+      count = 0;
+    }
+  }
+  if (count > 0) spd::add_gram(1, columns_.leftCols(count), 1, tail_);
+}
+
+void Tracker::start_if_ready() {
+  const double d = static_cast<double>(dimension_);
+  const double n = mass_square_ > 0 ? mass_ * mass_ / mass_square_ : 0;
+  const bool bounded = settings_.memory.kind == Memory::Kind::window_samples ||
+                       settings_.memory.kind == Memory::Kind::half_life_samples;
+  const double most = bounded ? .9 * steady_samples() : 3 * d;
+  if (n < std::max(std::min(3 * d, most), d + 1) - 1e-9) {
+    state_ = TrackerState::filling;
+    return;
+  }
+  if (--retry_in_ > 0) return;
+  retry_in_ = std::max<std::int64_t>(1, ring_.size() / 16);
+  health_.samples_effective = n;
+  choose_units();
+  const double nu = nu_ - static_cast<double>(lift_);
+  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
+    const Eigen::Map<const Eigen::VectorXd> x(ring_.x(k), dimension_);
+    ring_.weight(k, current_) = (d + nu) / (nu + x.squaredNorm());
+  }
+  tail_total_ = tail_mass_ = tail_square_ = 0;
+  if (tail_.size() > 0) tail_.setZero();
+  recount();
+  state_ = TrackerState::tracking;
+  if (!build()) return;
+  ++health_.rebuilds;
+  for (int k = 0; k < kExactIterations; ++k) {
+    if (!iterate()) return;
+    if (health_.residual_at_polish * .3 <= std::min(tolerance(), .01 * statistical_error())) return;
+  }
+  if (health_.residual_at_polish > statistical_error()) fail(TrackerState::not_converged);
+}
+
+// Power-of-two units and an offset from the medians of the ring, and the ring rewritten in them.
+void Tracker::choose_units() {
+  const Index n = ring_.size();
+  if (static_cast<Index>(scratch_values_.size()) < n)
+    scratch_values_.resize(2 * static_cast<std::size_t>(n));
+  const auto first = scratch_values_.begin();
+  const auto middle = first + n / 2;
+  const auto last = first + n;
+  for (Index j = 0; j < p_; ++j) {
+    const double old_unit = unit_(j);
+    const double old_offset = offset_(j);
+    double size = 0;
+    for (Index k = 0; k < n; ++k) {
+      first[k] = ring_.x(ring_.begin() + k)[j] * old_unit + old_offset;
+    }
+    if (lift_ == 1) {
+      std::nth_element(first, middle, last);
+      offset_(j) = *middle;
+    }
+    double sum = 0;
+    for (Index k = 0; k < n; ++k) {
+      first[k] = std::abs(ring_.x(ring_.begin() + k)[j] * old_unit + (old_offset - offset_(j)));
+      sum += first[k] / static_cast<double>(n);
+    }
+    std::nth_element(first, middle, last);
+    size = *middle > 0 ? *middle : sum;
+    unit_(j) = size > 0 && std::isfinite(size)
+                   ? std::exp2(std::clamp(std::floor(std::log2(size)), -480., 500.))
+                   : 1;
+    for (Index k = 0; k < n; ++k) {
+      double& value = ring_.x(ring_.begin() + k)[j];
+      value = (value * old_unit + (old_offset - offset_(j))) / unit_(j);
+    }
+  }
+  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {  // see kAbsurd
+    Eigen::Map<Eigen::VectorXd> x(ring_.x(k), p_);
+    const double largest = x.cwiseAbs().maxCoeff();
+    if (largest > kAbsurd) x *= kAbsurd / largest;
+  }
+}
+
+// A, P, W and ln det A from the ring's weights and E. On failure the tracker says why and stops.
+bool Tracker::build() {
+  polish_.abandon();
+  rebuild_wanted_ = false;
+  recount();
+  const double normal = total_ > 0 && mass_ > 0 && tail_mass_ > 0 ? total_ / mass_ : 1;
+  scratch_.setZero();
+  if (tail_.size() > 0 && tail_mass_ > 0) scratch_ = normal * tail_;
+  total_ = normal * tail_total_;
+  Index count = 0;
+  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
+    const double a = ring_.omega(k) * ring_.weight(k, current_);
+    total_ += a;
+    columns_.col(count++) =
+        std::sqrt(a) * Eigen::Map<const Eigen::VectorXd>(ring_.x(k), dimension_);
+    if (count == columns_.cols() || k + 1 == ring_.end()) {
+      spd::add_gram(1, columns_.leftCols(count), 1, scratch_);
+      count = 0;
+    }
+  }
+  if (!(total_ > 0) || !std::isfinite(total_) || !spd::cholesky(scratch_)) {
+    fail(TrackerState::not_positive_definite);
+    return false;
+  }
+  double least = 1;
+  for (Index j = 0; j < dimension_; ++j) {
+    least = std::min(least, scratch_(j, j) / scratch_.row(j).head(j + 1).norm());
+  }
+  if (!(least > 1e-7)) {  // spans fewer than p dimensions, but for rounding
+    fail(TrackerState::not_positive_definite);
+    return false;
+  }
+  log_det_ = 2 * scratch_.diagonal().array().log().sum();
+  spd::inverse_from_cholesky(scratch_);
+  precision_.assign(scratch_);
+  health_.since_polish = 0;
+  return true;
+}
+
+void Tracker::rebuild() {
+  ++health_.rebuilds;
+  if (!build()) return;
+  for (int k = 0; k < (exact() ? kExactIterations : kIterations); ++k) {
+    if (!iterate()) return;
+    if (contraction_ * health_.residual_at_polish <= tolerance()) return;
+  }
+}
+
+void Tracker::fail(TrackerState state) {
+  state_ = state;
+  polish_.abandon();
+  rebuild_wanted_ = false;
+  health_.iterations = 0;
+  view_size_ = 0;
+  retry_in_ = std::max<std::int64_t>(1, ring_.size() / 16);
+}
+
+void Tracker::polish_if_due() {
+  if (polish_.active()) {
+    polish_.step(ring_, tail_);
+    if (polish_.stage() == Polish::Stage::failed) return rebuild();
+    if (polish_.stage() == Polish::Stage::done) adopt();
+    return;
+  }
+  health_.samples_effective = mass_ * mass_ / mass_square_;
+  const double n = health_.samples_effective;
+  const bool due = static_cast<double>(health_.since_polish) >= n ||
+                   gauge_.estimate(n, health_.since_polish) > tolerance();
+  if (!due) return;
+  retire_tail();
+  recount();
+  const bool at_once = exact() || Polish::cost(dimension_, ring_.size(), tail_mass_ > 0) <= kOneGo;
+  if (!at_once) {
+    polish_.start(precision_, ring_,
+                  {total_, mass_, nu_ - static_cast<double>(lift_), static_cast<double>(dimension_),
+                   current_, tail_total_});
+    polish_.step(ring_, tail_);
+    return;
+  }
+  const int most = exact() ? kExactIterations : kIterations;
+  for (int k = 0; k < most; ++k) {
+    if (!iterate()) return;
+    if (contraction_ * health_.residual_at_polish <= tolerance()) return;
+  }
+}
+
+// One whole iteration at once. False when it failed; the tracker has then been rebuilt or stopped.
+bool Tracker::iterate() {
+  const double before = health_.iterations > 0 ? health_.residual_at_polish : 0;
+  polish_.start(precision_, ring_,
+                {total_, mass_, nu_ - static_cast<double>(lift_), static_cast<double>(dimension_),
+                 current_, tail_total_});
+  while (polish_.active()) polish_.step(ring_, tail_);
+  if (polish_.stage() == Polish::Stage::failed) {
+    fail(TrackerState::not_positive_definite);
+    return false;
+  }
+  const double now = std::max(polish_.residual(), polish_.centre_residual());
+  if (before > 1e-11 && now > 0) {  // two in a row show what an iteration leaves
+    contraction_ += .2 * (std::clamp(now / before, .02, .6) - contraction_);
+  }
+  adopt();
+  return tracking();
+}
+
+void Tracker::adopt() {
+  swap(precision_, polish_.precision());
+  current_ = 1 - current_;
+  total_ = polish_.total();
+  log_det_ = polish_.log_det();
+  const double found = polish_.residual();
+  gauge_.polished(found, contraction_ * found,
+                  health_.since_polish - (ring_.end() - polish_.last()));
+  health_.residual_at_polish = std::max(found, polish_.centre_residual());
+  health_.since_polish = ring_.end() - polish_.last();
+  health_.condition = polish_.condition();
+  ++health_.polishes;
+  ++health_.iterations;
+  if (health_.condition > kWorstCondition) return fail(TrackerState::ill_conditioned);
+  unsettled_ = found > 2 * statistical_error() ? unsettled_ + 1 : 0;
+  if (unsettled_ > 25) {
+    unsettled_ = 0;
+    return fail(TrackerState::not_converged);
+  }
+  precision_.settle();
+  precision_.copy_to(good_);
+  good_total_ = total_;
+  good_offset_ = offset_;
+  good_unit_ = unit_;
+  // What the iteration left per sample.
+  const Index n = static_cast<Index>(polish_.last() - polish_.first());
+  if (view_mass_.size() < n) {
+    view_mass_.resize(2 * n);
+    view_weight_.resize(2 * n);
+    view_distance_.resize(2 * n);
+  }
+  view_size_ = n;
+  view_first_ = polish_.first();
+  view_nu_ = polish_.from().nu + static_cast<double>(lift_);
+  double sum = 0;
+  for (Index k = 0; k < n; ++k) {
+    const std::int64_t position = view_first_ + k;
+    view_mass_(k) = ring_.omega(position);
+    sum += view_mass_(k);
+    const double u = ring_.weight(position, current_);
+    view_weight_(k) = u;
+    view_distance_(k) = std::max((static_cast<double>(p_) + view_nu_) / u - view_nu_, 0.);
+  }
+  view_mass_.head(n) /= sum;
+}
+
+void Tracker::update_health() {
+  health_.samples_effective = mass_square_ > 0 ? mass_ * mass_ / mass_square_ : 0;
+  if (!tracking()) {
+    health_.residual = kNaN;
+    health_.log_det = kNaN;
+    return;
+  }
+  health_.residual = gauge_.estimate(health_.samples_effective, health_.since_polish);
+  health_.log_det =
+      log_det_ - static_cast<double>(dimension_) * std::log(total_) + 2 * unit_.array().log().sum();
+}
+
+void Tracker::set_nu(double nu) {
+  assert(nu > static_cast<double>(lift_));
+  nu_ = nu;
+}
+
+bool Tracker::polish_now() {
+  if (!tracking()) return false;
+  polish_.abandon();
+  const bool ok = iterate();
+  update_health();
+  return ok;
+}
+
+double Tracker::ring_share() const { return mass_ > 0 ? 1 - tail_mass_ / mass_ : 1; }
+
+void Tracker::view_sample(Index k, Eigen::Ref<Eigen::VectorXd> x) const {
+  const Eigen::Map<const Eigen::VectorXd> scaled(ring_.x(view_first_ + k), p_);
+  x = scaled.cwiseProduct(unit_) + offset_;
+}
+
+void Tracker::score(Eigen::Ref<Eigen::VectorXd> centred, Eigen::Ref<Eigen::VectorXd> q,
+                    Eigen::Ref<Eigen::VectorXd> precision_diagonal) {
+  assert(tracking());
+  for (Index j = 0; j < p_; ++j) {
+    const std::size_t i = static_cast<std::size_t>(j);
+    centred(j) = x_[i] * unit_(j) / shrink_;
+    q(j) = total_ * y_[i] / (unit_(j) * shrink_);
+    precision_diagonal(j) = total_ * precision_.entry(j, j) / (unit_(j) * unit_(j));
+  }
+  if (lift_ == 0) return;
+  // m - offset = -S (W P e_p): one solve with the leading block.
+  precision_.copy_to(scratch_);
+  const Eigen::VectorXd last = scratch_.row(p_).head(p_).transpose();
+  block_ = scratch_.topLeftCorner(p_, p_);
+  if (!spd::cholesky(block_)) return;
+  Eigen::MatrixXd m = -last;
+  spd::solve(block_, m);
+  spd::solve_transposed(block_, m);
+  centred -= unit_.cwiseProduct(m.col(0));
+}
+
+bool Tracker::scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const {
+  double total = total_;
+  const Eigen::VectorXd* offset = &offset_;
+  const Eigen::VectorXd* unit = &unit_;
+  if (tracking()) {
+    precision_.settle();
+    precision_.copy_to(scratch_);
+  } else {
+    if (!(good_total_ > 0)) return false;
+    scratch_ = good_;
+    total = good_total_;
+    offset = &good_offset_;
+    unit = &good_unit_;
+  }
+  Eigen::VectorXd centre = *offset;
+  block_ = scratch_.topLeftCorner(p_, p_);
+  if (!spd::cholesky(block_)) return false;
+  if (lift_ == 1) {
+    Eigen::MatrixXd shift = -scratch_.row(p_).head(p_).transpose();
+    spd::solve(block_, shift);
+    spd::solve_transposed(block_, shift);
+    centre += unit->cwiseProduct(shift.col(0));
+  }
+  spd::inverse_from_cholesky(block_);
+  block_ /= total;
+  for (Index j = 0; j < p_; ++j) {
+    for (Index i = j; i < p_; ++i) block_(i, j) *= (*unit)(i) * (*unit)(j);
+  }
+  spd::mirror_lower(block_);
+  if (!block_.allFinite() || !centre.allFinite()) return false;
+  s = block_;
+  m = centre;
+  return true;
+}
+
+}  // namespace tailweir
