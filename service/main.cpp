@@ -15,7 +15,20 @@ int main(int argc, char** argv) {
         "tailweir");
     program.set_version_flag("--version", "tailweir " TAILWEIR_VERSION);
     program.require_subcommand(1);
-    CLI11_PARSE(program, argc, argv);
+    program.footer("tailweir COMMAND --help tells more. Start with: tailweir demo");
+    tailweir::add_run_command(program, exit_code);
+    tailweir::add_check_command(program, exit_code);
+    tailweir::add_replay_command(program, exit_code);
+    tailweir::add_send_command(program, exit_code);
+    tailweir::add_tap_command(program, exit_code);
+    tailweir::add_demo_command(program, exit_code);
+    try {
+      program.parse(argc, argv);
+    } catch (const CLI::ParseError& error) {
+      if (error.get_exit_code() == 0) return program.exit(error);  // --help, --version
+      std::fprintf(stderr, "tailweir: %s; see tailweir --help\n", error.what());
+      return tailweir::kUsage;
+    }
   } catch (const std::exception& error) {
     std::fprintf(stderr, "tailweir: internal error: %s\n", error.what());
     return tailweir::kInternal;
