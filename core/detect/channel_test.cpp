@@ -59,6 +59,8 @@ double ChannelTest::smallest(const ScoredSample& sample, const ScatterKnowledge&
   }
   const Ratio worst = ratio(r2, 1, sample.distance, p, known);
   if (!(worst.f >= critical_)) return 1;
+  // The mixture over c is heavier than its middle: most samples that got here end here.
+  if (p * student::tail_probability(worst.f, 1, worst.k) > rate) return 1;
   return std::min(1., p * tail(worst.f, 1, worst.k, p, known));
 }
 

@@ -10,8 +10,6 @@
 namespace tailweir::detect {
 
 namespace {
-constexpr double kCell = .125;      // spacing of the remembered values in ln D
-constexpr int kCells = 160;         // from e^-10 p to e^10 p
 constexpr double kGaussian = 1e6;   // k from which the closed form is used
 constexpr double kFewDegrees = 10;  // m below which 17 nodes are too coarse
 }  // namespace
@@ -50,8 +48,7 @@ PredictiveTail::PredictiveTail(double channels, double samples, double nu, bool 
   if (!(m > 0)) return;
   tail_ = MixedTail(m);
   ratio_per_distance_ = m / ((centre_estimated ? samples + 1 : samples) * channels);
-  first_ = std::log(channels) - kCell * kCells / 2;
-  remembered_.assign(kCells, 1);
+  cache_.forget(std::log(channels));
 }
 
 double PredictiveTail::exact(double distance) const {
@@ -59,28 +56,9 @@ double PredictiveTail::exact(double distance) const {
   return tail_.probability(distance * ratio_per_distance_, channels_, nu_);
 }
 
-double PredictiveTail::value_at(int number) {
-  double& value = remembered_[static_cast<std::size_t>(number)];
-  if (value > 0) value = std::log(exact(std::exp(first_ + kCell * number)));
-  return value;
-}
-
 double PredictiveTail::p_value(double distance) {
   if (!defined()) return std::nan("");
-  if (!(distance > 0)) return 1;
-  const double place = (std::log(distance) - first_) / kCell;
-  if (!(place >= 1 && place < kCells - 2)) return exact(distance);
-  const int number = static_cast<int>(place);
-  const double s = place - number;
-  // Cubic Lagrange interpolation on the four values around.
-  const double before = value_at(number - 1), left = value_at(number);
-  if (left < std::log(kExactBelow)) return exact(distance);
-  const double right = value_at(number + 1), after = value_at(number + 2);
-  const double log_p = -before * s * (s - 1) * (s - 2) / 6 +
-                       left * (s + 1) * (s - 1) * (s - 2) / 2 - right * (s + 1) * s * (s - 2) / 2 +
-                       after * (s + 1) * s * (s - 1) / 6;
-  const double p = std::exp(std::min(log_p, 0.));
-  return p < kExactBelow ? exact(distance) : p;
+  return cache_.value(distance, [this](double d) { return exact(d); });
 }
 
 }  // namespace tailweir::detect

@@ -15,7 +15,8 @@
 #pragma once
 
 #include <array>
-#include <vector>
+
+#include "core/detect/cached_tail.h"
 
 namespace tailweir::detect {
 
@@ -50,20 +51,15 @@ class PredictiveTail {
   }
   // By the nodes; distance >= 0.
   double exact(double distance) const;
-  // Interpolated in ln D between remembered exact values (relative error below 1e-4); below
-  // kExactBelow the exact value, so that no decision hangs on an interpolation.
+  // The same, remembered and interpolated (cached_tail.h).
   double p_value(double distance);
-  static constexpr double kExactBelow = .02;
 
  private:
-  double value_at(int number);
-
   double channels_ = 0, samples_ = 0, nu_ = 0;
   bool centre_estimated_ = false;
   double ratio_per_distance_ = 0;
-  double first_ = 0;  // ln D of remembered value 0
   MixedTail tail_;
-  std::vector<double> remembered_;  // ln P at first_ + .125 number; +1 where not yet computed
+  CachedTail cache_;
 };
 
 }  // namespace tailweir::detect

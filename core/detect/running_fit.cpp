@@ -35,6 +35,7 @@ std::int64_t RunningFit::held() const {
 void RunningFit::restore(const RunningFitState& state) {
   assert(state.ring.size() == state_.ring.size());
   state_ = state;
+  cache_.forget(state_.log_scale + std::log(channels_));
 }
 
 void RunningFit::push(double distance) {
@@ -89,6 +90,7 @@ void RunningFit::step() {
   const double step_a = (score_a - info_cross * std::log(new_nu / nu)) / info_a;
   state_.log_scale += std::clamp(step_a, -kLargestStep, kLargestStep);
   state_.nu = new_nu;
+  cache_.forget(state_.log_scale + std::log(channels_));
 }
 
 void RunningFit::fit_whole() {
@@ -104,9 +106,11 @@ void RunningFit::fit_whole() {
   begin_pass();
 }
 
-double RunningFit::p_value(double distance) const {
+double RunningFit::p_value(double distance) {
   assert(ready());
-  return student::tail_probability(distance * std::exp(-state_.log_scale), channels_, state_.nu);
+  return cache_.value(distance, [this](double d) {
+    return student::tail_probability(d * std::exp(-state_.log_scale), channels_, state_.nu);
+  });
 }
 
 double RunningFit::rank_p_value(double distance) const {

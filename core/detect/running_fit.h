@@ -15,6 +15,8 @@
 #include <cstdint>
 #include <vector>
 
+#include "core/detect/cached_tail.h"
+
 namespace tailweir::detect {
 
 struct RunningFitSettings {
@@ -49,8 +51,9 @@ class RunningFit {
   double nu() const { return state_.nu; }
   std::int64_t held() const;
 
-  // P(D >= distance) under the fit. Precondition: ready().
-  double p_value(double distance) const;
+  // P(D >= distance) under the fit, remembered and interpolated (cached_tail.h). Precondition:
+  // ready().
+  double p_value(double distance);
   // Precondition: none; 1 while nothing is remembered. Costs a scan of `rank_memory` values.
   double rank_p_value(double distance) const;
 
@@ -68,6 +71,7 @@ class RunningFit {
   double channels_;
   RunningFitSettings settings_;
   RunningFitState state_;
+  CachedTail cache_;
 };
 
 }  // namespace tailweir::detect

@@ -1,4 +1,5 @@
-// Makes core/detect/thresholds_table.cpp: detect_thresholds [chains] > core/detect/thresholds_table.cpp
+// Makes core/detect/thresholds_table.cpp: detect_thresholds [chains] >
+// core/detect/thresholds_table.cpp
 //
 // Tail: calibration.h at every grid point and direction. Scale: exact, by Markov chain. Shape: the
 // monitor itself on directions uniform on the sphere. Two columns each, at 5000 and 25000 samples.
@@ -47,8 +48,10 @@ void print_pair(double first, double second) { std::printf("{%.3f, %.3f}", first
 
 int main(int count, char** values) {
   const int chains = count > 1 ? std::atoi(values[1]) : 1000;
-  std::printf("// Made by: detect_thresholds %d\n#include \"core/detect/thresholds_table.h\"\n\n", chains);
-  std::printf("namespace tailweir::detect {\n\n// [direction][channels][nu]{at 5000, at 25000 samples}\n");
+  std::printf("// Made by: detect_thresholds %d\n#include \"core/detect/thresholds_table.h\"\n\n",
+              chains);
+  std::printf(
+      "namespace tailweir::detect {\n\n// [direction][channels][nu]{at 5000, at 25000 samples}\n");
   std::printf("const ThresholdPair kTailTable[2][kTableChannels.size()][kTableNu.size()] = {\n");
   for (TailDirection direction : {TailDirection::heavier, TailDirection::lighter}) {
     std::printf("    {\n");
@@ -63,14 +66,15 @@ int main(int count, char** values) {
     }
     std::printf("    },\n");
   }
-  std::printf("};\n\nconst ThresholdPair kScaleTable[2][kTableChannels.size()][kTableNu.size()] = {\n");
+  std::printf(
+      "};\n\nconst ThresholdPair kScaleTable[2][kTableChannels.size()][kTableNu.size()] = {\n");
   for (double a : {kScaleShift, -kScaleShift}) {
     std::printf("    {\n");
     for (double p : kTableChannels) {
       std::printf("        {");
       for (double nu : kTableNu) {
         const auto below = [&](double z) { return scale_increment_below(z, p, nu, a); };
-        print_pair(cusum_threshold(below, 5000), cusum_threshold(below, 25000));
+        print_pair(cusum_threshold(below, 5000, 200), cusum_threshold(below, 25000, 200));
         std::printf("%s", nu == kTableNu.back() ? "},\n" : ", ");
       }
     }
