@@ -1,6 +1,5 @@
 // tailweir check: validates settings and says in plain words what will run.
 
-#include <CLI/CLI.hpp>
 #include <cmath>
 #include <cstdio>
 #include <memory>
@@ -121,19 +120,11 @@ void describe(const Settings& settings) {
 
 }  // namespace
 
-void add_check_command(CLI::App& program, int& exit_code) {
-  CLI::App* command = program.add_subcommand(
-      "check", "Validate settings and print what will run, or FILE:LINE:COLUMN and the cure");
-  auto path = std::make_shared<std::string>();
-  command->add_option("SETTINGS", *path, "settings file (YAML)")->required();
-  command->callback([path, &exit_code] {
-    Result<Settings> settings = load_settings(*path);
-    if (!settings) {
-      exit_code = complain(settings.fault(), kBadSettings);
-      return;
-    }
-    describe(settings.value());
-  });
+int run_check(const CheckOptions& options) {
+  Result<Settings> settings = load_settings(options.settings);
+  if (!settings) return complain(settings.fault(), kBadSettings);
+  describe(settings.value());
+  return kOk;
 }
 
 }  // namespace tailweir

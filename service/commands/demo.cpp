@@ -1,6 +1,5 @@
 // tailweir demo: sender, daemon and tap in one process over loopback, on the invented Saltmarch.
 
-#include <CLI/CLI.hpp>
 #include <algorithm>
 #include <chrono>
 #include <cmath>
@@ -20,11 +19,6 @@
 
 namespace tailweir {
 namespace {
-
-struct Options {
-  std::uint64_t seed = 1;
-  bool calm = false, quick = false, show_settings = false;
-};
 
 std::string settings_text(const std::vector<std::string>& channels) {
   std::string text =
@@ -62,7 +56,7 @@ constexpr std::uint64_t kShown = 25;
 
 class Demo {
  public:
-  explicit Demo(const Options& options)
+  explicit Demo(const DemoOptions& options)
       : options_(options), scenario_(options.seed, !options.calm), colour_(wants_colour()) {}
 
   int run() {
@@ -223,7 +217,7 @@ class Demo {
     return good ? kOk : kInternal;
   }
 
-  Options options_;
+  DemoOptions options_;
   SaltmarchScenario scenario_;
   bool colour_;
   Seen seen_;
@@ -231,18 +225,6 @@ class Demo {
 
 }  // namespace
 
-void add_demo_command(CLI::App& program, int& exit_code) {
-  CLI::App* command = program.add_subcommand(
-      "demo", "See it work: sender, daemon and tap in one process on invented prices");
-  auto options = std::make_shared<Options>();
-  command->add_option("--seed", options->seed, "seed of the invented prices")
-      ->capture_default_str();
-  command->add_flag("--calm", options->calm,
-                    "control run: nothing planted, nothing should be reported");
-  command->add_flag("--quick", options->quick, "as fast as it goes instead of half a minute");
-  command->add_flag("--show-settings", options->show_settings,
-                    "print the embedded settings and stop");
-  command->callback([options, &exit_code] { exit_code = Demo(*options).run(); });
-}
+int run_demo(const DemoOptions& options) { return Demo(options).run(); }
 
 }  // namespace tailweir

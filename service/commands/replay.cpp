@@ -1,6 +1,5 @@
 // tailweir replay: the same engine over a recording, as fast as it goes.
 
-#include <CLI/CLI.hpp>
 #include <algorithm>
 #include <cmath>
 #include <cstdio>
@@ -19,11 +18,6 @@ namespace tailweir {
 namespace {
 
 namespace fs = std::filesystem;
-
-struct Options {
-  std::string settings, recording, directory, matrices = "flagged";
-  bool keep_going = false, overwrite = false;
-};
 
 // What the report says of one horizon.
 struct Tally {
@@ -199,7 +193,7 @@ Result<std::vector<std::size_t>> match(const Settings& settings, const Recording
   return place;
 }
 
-std::optional<Fault> prepare(const Options& options) {
+std::optional<Fault> prepare(const ReplayOptions& options) {
   std::error_code error;
   fs::create_directories(options.directory, error);
   if (error)
@@ -210,7 +204,9 @@ std::optional<Fault> prepare(const Options& options) {
   return {};
 }
 
-int run_replay(const Options& options) {
+}  // namespace
+
+int run_replay(const ReplayOptions& options) {
   Result<Settings> settings = load_settings(options.settings);
   if (!settings) return complain(settings.fault(), kBadSettings);
   Result<MatricesPolicy> policy = matrices_policy(options.matrices);
@@ -254,27 +250,6 @@ int run_replay(const Options& options) {
               static_cast<unsigned long long>(counters.accepted),
               static_cast<unsigned long long>(counters.refused), options.directory.c_str());
   return kOk;
-}
-
-}  // namespace
-
-void add_replay_command(CLI::App& program, int& exit_code) {
-  CLI::App* command = program.add_subcommand(
-      "replay", "Run the same engine over a recording and write its records");
-  auto options = std::make_shared<Options>();
-  command->add_option("SETTINGS", options->settings, "settings file (YAML)")->required();
-  command->add_option("--from", options->recording, "recording (CSV), - for standard input")
-      ->required();
-  command->add_option("--into", options->directory, "directory for the records and the report")
-      ->required();
-  command
-      ->add_option("--matrices", options->matrices,
-                   "which estimates carry centre and scatter: every, N, flagged, never")
-      ->capture_default_str();
-  command->add_flag("--keep-going", options->keep_going,
-                    "count refused samples instead of stopping");
-  command->add_flag("--overwrite", options->overwrite, "write into a directory that is not empty");
-  command->callback([options, &exit_code] { exit_code = run_replay(*options); });
 }
 
 }  // namespace tailweir

@@ -1,6 +1,5 @@
 // tailweir run: the daemon in the foreground, until SIGINT or SIGTERM.
 
-#include <CLI/CLI.hpp>
 #include <csignal>
 #include <cstdio>
 #include <memory>
@@ -46,13 +45,6 @@ int run_daemon(const std::string& path, bool quiet) {
 
 }  // namespace
 
-void add_run_command(CLI::App& program, int& exit_code) {
-  CLI::App* command = program.add_subcommand("run", "Run the daemon in the foreground");
-  auto path = std::make_shared<std::string>();
-  auto quiet = std::make_shared<bool>(false);
-  command->add_option("SETTINGS", *path, "settings file (YAML)")->required();
-  command->add_flag("--quiet", *quiet, "log warnings and errors only");
-  command->callback([path, quiet, &exit_code] { exit_code = run_daemon(*path, *quiet); });
-}
+int run_run(const RunOptions& options) { return run_daemon(options.settings, options.quiet); }
 
 }  // namespace tailweir

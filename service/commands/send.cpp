@@ -1,6 +1,5 @@
 // tailweir send: plays a recording into a daemon, acknowledged, paced or as fast as it goes.
 
-#include <CLI/CLI.hpp>
 #include <chrono>
 #include <cstdio>
 #include <deque>
@@ -15,12 +14,6 @@
 
 namespace tailweir {
 namespace {
-
-struct Options {
-  std::string address, recording, invent, name = "send", every;
-  std::uint64_t seed = 1, samples = 0;
-  bool keep_going = false;
-};
 
 // "100ms", "2s", "500us"; zero when empty.
 Result<std::chrono::microseconds> pace(const std::string& text) {
@@ -82,7 +75,7 @@ class InventedSource : public Source {
   std::uint64_t samples_, made_ = 0;
 };
 
-Result<std::unique_ptr<Source>> open_source(const Options& options) {
+Result<std::unique_ptr<Source>> open_source(const SendOptions& options) {
   if (!options.invent.empty()) {
     if (options.invent != "saltmarch") {
       return Fault{"--invent", "'" + options.invent + "' is unknown", "saltmarch"};
@@ -94,7 +87,8 @@ Result<std::unique_ptr<Source>> open_source(const Options& options) {
   return std::unique_ptr<Source>(new FileSource(std::move(reader.value())));
 }
 
-int play(Source& source, Sender& sender, const Options& options, std::chrono::microseconds every) {
+int play(Source& source, Sender& sender, const SendOptions& options,
+         std::chrono::microseconds every) {
   std::uint64_t sent = 0;
   bool refused = false;
   std::deque<std::uint64_t> lines;  // of samples not answered yet
@@ -136,7 +130,9 @@ int play(Source& source, Sender& sender, const Options& options, std::chrono::mi
   return refused && !options.keep_going ? kBadData : kOk;
 }
 
-int run_send(const Options& options) {
+}  // namespace
+
+int run_send(const SendOptions& options) {
   if (options.recording.empty() == options.invent.empty()) {
     return complain({"send", "needs one source", "either --from RECORDING or --invent saltmarch"},
                     kUsage);
@@ -151,24 +147,6 @@ int run_send(const Options& options) {
   Result<std::uint64_t> connected = sender.connect();
   if (!connected) return complain(connected.fault(), kUnavailable);
   return play(*source.value(), sender, options, every.value());
-}
-
-}  // namespace
-
-void add_send_command(CLI::App& program, int& exit_code) {
-  CLI::App* command = program.add_subcommand("send", "Play samples into a daemon, acknowledged");
-  auto options = std::make_shared<Options>();
-  command->add_option("ADDRESS", options->address, "the daemon's feed.listen, tcp://HOST:PORT")
-      ->required();
-  command->add_option("--from", options->recording, "recording (CSV), - for standard input");
-  command->add_option("--invent", options->invent, "invented samples instead: saltmarch");
-  command->add_option("--seed", options->seed, "seed of the invented samples")
-      ->capture_default_str();
-  command->add_option("--samples", options->samples, "how many invented samples");
-  command->add_option("--every", options->every, "pace: one sample each 100ms, 2s, 500us");
-  command->add_option("--name", options->name, "name of this sender")->capture_default_str();
-  command->add_flag("--keep-going", options->keep_going, "go on after a refused sample");
-  command->callback([options, &exit_code] { exit_code = run_send(*options); });
 }
 
 }  // namespace tailweir

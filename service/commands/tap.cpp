@@ -1,6 +1,5 @@
 // tailweir tap: prints what a daemon publishes, readable or as JSON lines.
 
-#include <CLI/CLI.hpp>
 #include <csignal>
 #include <cstdio>
 #include <memory>
@@ -14,13 +13,6 @@
 namespace tailweir {
 namespace {
 
-struct Options {
-  std::string address, topic, matrices = "every";
-  bool json = false;
-  std::uint64_t count = 0;
-  double patience = 0;
-};
-
 volatile std::sig_atomic_t stopped = 0;
 void stop(int) { stopped = 1; }
 
@@ -33,7 +25,7 @@ MatricesPolicy policy_of(const std::string& word) {
 
 class Tap {
  public:
-  explicit Tap(const Options& options) : options_(options), colour_(wants_colour()) {}
+  explicit Tap(const TapOptions& options) : options_(options), colour_(wants_colour()) {}
 
   // Prints one message; true when a record was printed.
   bool print(const Subscriber::Message& message, const Subscriber& subscriber) {
@@ -69,12 +61,14 @@ class Tap {
     }
   }
 
-  const Options& options_;
+  const TapOptions& options_;
   bool colour_;
   std::unique_ptr<RecordLines> lines_;
 };
 
-int run_tap(const Options& options) {
+}  // namespace
+
+int run_tap(const TapOptions& options) {
   Subscriber subscriber(options.address, options.topic);
   Result<bool> opened = subscriber.open();
   if (!opened) return complain(opened.fault(), kUnavailable);
@@ -109,26 +103,6 @@ int run_tap(const Options& options) {
   }
   std::fflush(stdout);
   return kOk;
-}
-
-}  // namespace
-
-void add_tap_command(CLI::App& program, int& exit_code) {
-  CLI::App* command = program.add_subcommand("tap", "Print what a daemon publishes");
-  auto options = std::make_shared<Options>();
-  command->add_option("ADDRESS", options->address, "the daemon's publish.address, tcp://HOST:PORT")
-      ->required();
-  command->add_flag("--json", options->json, "JSON lines, the same as replay writes");
-  command->add_option("--topic", options->topic,
-                      "prefix such as estimate/metals/slow or flag/metals");
-  command
-      ->add_option("--matrices", options->matrices,
-                   "estimates with centre and scatter: every, flagged, never")
-      ->check(CLI::IsMember({"every", "flagged", "never"}))
-      ->capture_default_str();
-  command->add_option("--count", options->count, "stop after this many records");
-  command->add_option("--patience", options->patience, "give up after this many quiet seconds");
-  command->callback([options, &exit_code] { exit_code = run_tap(*options); });
 }
 
 }  // namespace tailweir
