@@ -85,7 +85,8 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
       unit_(Eigen::VectorXd::Ones(p_)),
       polish_(dimension_, lift_),
       scratch_(dimension_, dimension_),
-      block_(p_, p_) {
+      block_(p_, p_),
+      column_(p_, 1) {
   assert(nu > static_cast<double>(lift_));
   const std::size_t padded = static_cast<std::size_t>(precision_.padded());
   x_.assign(padded, 0);
@@ -696,25 +697,26 @@ void Tracker::view_sample(Index k, Eigen::Ref<Eigen::VectorXd> x) const {
   x = scaled.cwiseProduct(unit_) + offset_;
 }
 
-void Tracker::score(Eigen::Ref<Eigen::VectorXd> centred, Eigen::Ref<Eigen::VectorXd> q,
-                    Eigen::Ref<Eigen::VectorXd> precision_diagonal) {
+void Tracker::residuals(Eigen::Ref<Eigen::VectorXd> q,
+                        Eigen::Ref<Eigen::VectorXd> precision_diagonal) const {
   assert(tracking());
   for (Index j = 0; j < p_; ++j) {
-    const std::size_t i = static_cast<std::size_t>(j);
-    centred(j) = x_[i] * unit_(j) / shrink_;
-    q(j) = total_ * y_[i] / (unit_(j) * shrink_);
+    q(j) = total_ * y_[static_cast<std::size_t>(j)] / (unit_(j) * shrink_);
     precision_diagonal(j) = total_ * precision_.entry(j, j) / (unit_(j) * unit_(j));
   }
+}
+
+void Tracker::centred(Eigen::Ref<Eigen::VectorXd> x) const {
+  for (Index j = 0; j < p_; ++j) x(j) = x_[static_cast<std::size_t>(j)] * unit_(j) / shrink_;
   if (lift_ == 0) return;
   // m - offset = -S (W P e_p): one solve with the leading block.
   precision_.copy_to(scratch_);
-  const Eigen::VectorXd last = scratch_.row(p_).head(p_).transpose();
   block_ = scratch_.topLeftCorner(p_, p_);
   if (!spd::cholesky(block_)) return;
-  Eigen::MatrixXd m = -last;
-  spd::solve(block_, m);
-  spd::solve_transposed(block_, m);
-  centred -= unit_.cwiseProduct(m.col(0));
+  column_ = -scratch_.row(p_).head(p_).transpose();
+  spd::solve(block_, column_);
+  spd::solve_transposed(block_, column_);
+  x -= unit_.cwiseProduct(column_.col(0));
 }
 
 bool Tracker::scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const {

@@ -92,10 +92,12 @@ class Tracker {
   // Sample k of the view in the channels' units.
   void view_sample(Index k, Eigen::Ref<Eigen::VectorXd> x) const;
 
-  // For the sample of the last predict(): x - m (p), S^-1 (x - m) (p), and diag(S^-1) (p), before
-  // it was absorbed. Valid between predict() and absorb(). Preconditions: tracking().
-  void score(Eigen::Ref<Eigen::VectorXd> centred, Eigen::Ref<Eigen::VectorXd> q,
-             Eigen::Ref<Eigen::VectorXd> precision_diagonal);
+  // For the sample of the last predict(), before it is absorbed: S^-1 (x - m) (p) and diag(S^-1)
+  // (p), channels' units. O(p). Precondition: tracking(). Valid between predict() and absorb().
+  void residuals(Eigen::Ref<Eigen::VectorXd> q,
+                 Eigen::Ref<Eigen::VectorXd> precision_diagonal) const;
+  // The same sample's x - m (p). O(p^3/6) with an estimated centre, O(p) otherwise.
+  void centred(Eigen::Ref<Eigen::VectorXd> x) const;
 
   // Current S (p x p, whole) and m (p), channels' units; the last good ones when not tracking().
   // False, both untouched, when there are none or they do not factorise. p^3/2 multiply-adds.
@@ -165,7 +167,7 @@ class Tracker {
   Gauge gauge_;
   double contraction_ = .3;  // what a repeated iteration leaves of the distance, learned
   double after_ = 0;         // distance thought left by the last iteration
-  mutable Eigen::MatrixXd scratch_, block_;
+  mutable Eigen::MatrixXd scratch_, block_, column_;
   Eigen::MatrixXd columns_;
   Index view_size_ = 0;
   std::int64_t view_first_ = 0;
