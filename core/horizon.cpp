@@ -63,7 +63,14 @@ bool Horizon::push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time
   const bool flagged = has_nu_ && std::isfinite(estimate_.distance) && score(x, flag);
   tracker_.absorb();
   ++since_nu_;
-  if (tracker_.tracking() && tracker_.health().iterations > 0) refresh_nu();
+  if (tracker_.tracking()) {
+    if (tracker_.health().iterations > 0) {
+      refresh_nu();
+    } else if (since_nu_ >= tracker_.health().samples_effective / 2) {
+      tracker_.refresh_view();
+      refresh_nu();
+    }
+  }
   publish();
   return flagged;
 }
@@ -204,7 +211,7 @@ void Horizon::publish() {
   estimate_.nu = nu_.nu;
   estimate_.nu_low = nu_.nu_low;
   estimate_.nu_high = nu_.nu_high;
-  estimate_.nu_fit = tracker_.view_nu();
+  estimate_.nu_fit = tracker_.fit_nu();
   estimate_.covariance_factor = nu_.nu > 2 ? nu_.nu / (nu_.nu - 2) : kNaN;
   estimate_.log_volatility = health.log_det / (2 * static_cast<double>(p_));
   estimate_.residual = health.residual;

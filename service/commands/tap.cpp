@@ -31,7 +31,11 @@ class Tap {
   bool print(const Subscriber::Message& message, const Subscriber& subscriber) {
     if (const auto* panels = std::get_if<std::vector<PanelDescription>>(&message.content)) {
       lines_ = std::make_unique<RecordLines>(*panels, policy_of(options_.matrices));
-      if (!options_.json) describe(*panels);
+      if (options_.json) {
+        std::fprintf(stderr, "tailweir: connected to %s\n", options_.address.c_str());
+      } else {
+        describe(*panels);
+      }
       return false;
     }
     if (const auto* estimate = std::get_if<EstimateRecord>(&message.content)) {

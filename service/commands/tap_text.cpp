@@ -28,7 +28,7 @@ std::string estimate_text(const EstimateRecord& record,
   const PanelDescription& panel = panels[record.panel];
   const Estimate& e = record.estimate;
   std::string text = clock_text(format_time(record.time_ns)) + "  " +
-                     padded(panel.name + "/" + panel.horizons[record.horizon], 18);
+                     padded(panel.name + "/" + panel.horizons[record.horizon], 24);
   if (e.state != HorizonState::live) {
     const char* state = e.state == HorizonState::impaired ? "fallback" : name_of(e.state);
     return text + padded(state, 9) + (e.reason == StateReason::none ? "" : name_of(e.reason)) +
@@ -45,7 +45,7 @@ std::string flag_text(const std::string& json) {
   const nlohmann::json flag = nlohmann::json::parse(json, nullptr, false);
   if (!flag.is_object() || !flag.contains("channels") || !flag["channels"].is_array()) return {};
   std::string text = clock_text(flag.value("time", "")) + "  " +
-                     padded(flag.value("panel", "") + "/" + flag.value("horizon", ""), 18) +
+                     padded(flag.value("panel", "") + "/" + flag.value("horizon", ""), 24) +
                      padded("FLAG", 9) + flag.value("severity", "") + ", p " +
                      short_number(flag.value("p_value", 0.)) + ": ";
   int named = 0;
