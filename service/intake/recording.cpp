@@ -1,6 +1,7 @@
 #include "service/intake/recording.h"
 
 #include <sys/stat.h>
+#include <unistd.h>
 
 #include <algorithm>
 #include <cerrno>
@@ -88,17 +89,15 @@ bool RecordingReader::refill() {
   start_ = 0;
   const std::size_t held = buffer_.size();
   buffer_.resize(held + kChunk);
-  const std::size_t got = std::fread(buffer_.data() + held, 1, kChunk, file_.get());
-  buffer_.resize(held + got);
-  if (got == kChunk) return true;
-  if (std::ferror(file_.get()) != 0) {
-    unreadable_ = true;
-    fault_ = Fault{name_, std::string("cannot be read: ") + std::strerror(errno),
-                   "name a CSV file that can be read"};
-    return false;
-  }
-  exhausted_ = std::feof(file_.get()) != 0;
-  return true;
+  // read(2), not fread(3): a pipe hands over what it has instead of waiting for a whole chunk.
+  const ssize_t got = ::read(fileno(file_.get()), buffer_.data() + held, kChunk);
+  buffer_.resize(held + static_cast<std::size_t>(std::max<ssize_t>(got, 0)));
+  exhausted_ = got <= 0;
+  if (got >= 0) return true;
+  unreadable_ = true;
+  fault_ = Fault{name_, std::string("cannot be read: ") + std::strerror(errno),
+                 "name a CSV file that can be read"};
+  return false;
 }
 
 // Looks for the end of the row that starts at start_: the offset of its line feed, or of the end of
@@ -199,13 +198,17 @@ bool RecordingReader::split_row() {
 
 std::optional<Fault> RecordingReader::read_header() {
   const std::string shape = "the first line is time,NAME,NAME,...";
+  while (buffer_.size() < 3 && !exhausted_) {
+    if (!refill()) return fault_;
+  }
+  if (buffer_.compare(0, 3, "\xef\xbb\xbf") == 0) start_ = 3;
+  bytes_read_ = start_;
   const Fetch fetched = fetch_row();
   if (fetched == Fetch::fault) return fault_;
   if (fetched == Fetch::end) return fail(fault_at(1, "is empty", shape));
   if (row_.substr(0, 2) == "\xff\xfe" || row_.substr(0, 2) == "\xfe\xff") {
     return fail(fault_at(1, "is UTF-16 text", "save it as UTF-8"));
   }
-  if (row_.substr(0, 3) == "\xef\xbb\xbf") row_.remove_prefix(3);
   if (!split_row()) return fault_;
   if (trimmed(cells_[0]) != "time") {
     return fail(fault_at(line_, "the first column is " + quoted(cells_[0]) + ", not time", shape));
