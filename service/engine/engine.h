@@ -31,8 +31,8 @@ enum class RefusalReason : std::uint32_t {
   not_finite = 2,        // an infinite value
   missing = 3,           // a missing value while missing entries are not supported
   time_backwards = 4,    // earlier than the last accepted sample
-  not_positive = 5,      // a level <= 0 that is to enter as a log difference
-  out_of_range = 6,      // |value| above 1e150, or between 0 and 1e-150
+  not_positive = 5,      // a level <= 0 that enters by a logarithm or a ratio
+  out_of_range = 6,      // |value| or |change| above 1e150, or in (0, 1e-150)
   sequence_gap = 7,      // sender sequence beyond the next expected: the sender goes back
   bad_frame = 8          // damaged or foreign frame: never reaches the engine, counted by intake
 };
@@ -75,7 +75,7 @@ class Engine {
   const std::vector<PanelDescription>& descriptions() const;
   const EngineCounters& counters() const;
   std::uint64_t sequence() const;          // of the last accepted sample
-  std::int64_t last_time_ns() const;
+  std::int64_t last_time_ns() const;       // 0 before the first
   // Next sequence expected of a sender (1 for an unknown one).
   std::uint64_t next_of(const std::string& sender) const;
   // Latest estimate of a panel's horizon, with scatter and centre when it has them.

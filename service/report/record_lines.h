@@ -1,0 +1,64 @@
+// Records as JSON lines: what `replay` writes and `tap --json` prints, the same bytes for the same
+// record.
+//
+//   {"sequence":7,"time":"2026-03-01T09:30:00.000000000Z","panel":"metals","horizon":"slow",...}
+//
+// Numbers are the shortest text that reads back to the same double; what is not defined is null.
+// Fields never change order (docs: service/report/README.md). Written by hand, not through a JSON
+// library: one line per sample and horizon is the hot path. Thread rule: one owner. No I/O.
+#pragma once
+
+#include <cstdint>
+#include <string>
+#include <vector>
+
+#include "core/result.h"
+#include "service/engine/records.h"
+
+namespace tailweir {
+
+const char* name_of(HorizonState state);
+const char* name_of(StateReason reason);
+const char* name_of(tail::NuStatus status);
+const char* name_of(Severity severity);
+
+// Which estimate lines carry centre and scatter; they dominate the size of the output.
+struct MatricesPolicy {
+  enum class When { every, at_alerts, never };
+  When when = When::at_alerts;  // alerts, and the last sample
+  std::uint64_t every = 1;      // for When::every: samples whose sequence is a multiple of it
+
+  bool wants(std::uint64_t sequence) const { return when == When::every && sequence % every == 0; }
+  bool wants_last() const { return when != When::never; }
+};
+// Reads "every", a whole number N > 0, "alerts" or "never".
+Result<MatricesPolicy> parse_matrices_policy(const std::string& text);
+
+class RecordLines {
+ public:
+  RecordLines(const std::vector<PanelDescription>& descriptions, MatricesPolicy policy);
+
+  // Whether the descriptions have every name the record refers to, and its arrays fit.
+  bool knows(const Record& record) const;
+
+  // Appends the line of a record, line feed included; matrices as the policy says. Precondition:
+  // knows(record). About 1 us and no allocation once `out` has room.
+  void append(const Record& record, std::string& out) const;
+  // The same with the policy overruled.
+  void append(const EstimateRecord& record, bool matrices, std::string& out) const;
+  void append(const FlagRecord& record, std::string& out) const;
+
+  const MatricesPolicy& policy() const { return policy_; }
+
+ private:
+  // Ready-made pieces of text of one panel.
+  struct Pieces {
+    std::vector<std::string> panel_and_horizon;  // ,"panel":"metals","horizon":"slow"
+    std::string channels;                        // ["copper","tin"]
+    std::vector<std::string> channel;            // "copper"
+  };
+  std::vector<Pieces> pieces_;
+  MatricesPolicy policy_;
+};
+
+}  // namespace tailweir
