@@ -15,7 +15,13 @@ int main(int argc, char** argv) {
         "tailweir");
     program.set_version_flag("--version", "tailweir " TAILWEIR_VERSION);
     program.require_subcommand(1);
-    CLI11_PARSE(program, argc, argv);
+    tailweir::add_check_command(program, exit_code);
+    tailweir::add_replay_command(program, exit_code);
+    try {
+      program.parse(argc, argv);
+    } catch (const CLI::ParseError& error) {
+      return program.exit(error) == 0 ? tailweir::kOk : tailweir::kUsage;
+    }
   } catch (const std::exception& error) {
     std::fprintf(stderr, "tailweir: internal error: %s\n", error.what());
     return tailweir::kInternal;

@@ -1,5 +1,6 @@
 #include "service/report/record_lines.h"
 
+#include <algorithm>
 #include <cassert>
 #include <charconv>
 #include <cmath>
@@ -175,25 +176,27 @@ RecordLines::RecordLines(const std::vector<PanelDescription>& descriptions, Matr
   }
 }
 
+bool RecordLines::has(std::uint32_t panel, std::uint32_t horizon) const {
+  return panel < pieces_.size() && horizon < pieces_[panel].panel_and_horizon.size();
+}
+
+bool RecordLines::knows(const EstimateRecord& record) const {
+  if (!has(record.panel, record.horizon)) return false;
+  const std::size_t p = pieces_[record.panel].channel.size();
+  return (record.centre.empty() || record.centre.size() == p) &&
+         (record.scatter.empty() || record.scatter.size() == p * (p + 1) / 2);
+}
+
+bool RecordLines::knows(const FlagRecord& record) const {
+  if (!has(record.panel, record.horizon)) return false;
+  const auto p = static_cast<Index>(pieces_[record.panel].channel.size());
+  return std::all_of(
+      record.flag.channels.begin(), record.flag.channels.end(),
+      [p](const ChannelBlame& blame) { return blame.channel >= 0 && blame.channel < p; });
+}
+
 bool RecordLines::knows(const Record& record) const {
-  const auto fits = [this](std::uint32_t panel, std::uint32_t horizon) {
-    return panel < pieces_.size() && horizon < pieces_[panel].panel_and_horizon.size();
-  };
-  if (const auto* estimate = std::get_if<EstimateRecord>(&record)) {
-    if (!fits(estimate->panel, estimate->horizon)) return false;
-    const std::size_t p = pieces_[estimate->panel].channel.size();
-    return (estimate->centre.empty() || estimate->centre.size() == p) &&
-           (estimate->scatter.empty() || estimate->scatter.size() == p * (p + 1) / 2);
-  }
-  const auto& flag = *std::get_if<FlagRecord>(&record);
-  if (!fits(flag.panel, flag.horizon)) return false;
-  for (const ChannelBlame& blame : flag.flag.channels) {
-    if (blame.channel < 0 ||
-        static_cast<std::size_t>(blame.channel) >= pieces_[flag.panel].channel.size()) {
-      return false;
-    }
-  }
-  return true;
+  return std::visit([this](const auto& one) { return knows(one); }, record);
 }
 
 void RecordLines::append(const Record& record, std::string& out) const {

@@ -40,6 +40,8 @@ class RecordLines {
 
   // Whether the descriptions have every name the record refers to, and its arrays fit.
   bool knows(const Record& record) const;
+  bool knows(const EstimateRecord& record) const;
+  bool knows(const FlagRecord& record) const;
 
   // Appends the line of a record, line feed included; matrices as the policy says. Precondition:
   // knows(record). About 1 us and no allocation once `out` has room.
@@ -57,6 +59,8 @@ class RecordLines {
     std::string channels;                        // ["copper","tin"]
     std::vector<std::string> channel;            // "copper"
   };
+  bool has(std::uint32_t panel, std::uint32_t horizon) const;
+
   std::vector<Pieces> pieces_;
   MatricesPolicy policy_;
 };
