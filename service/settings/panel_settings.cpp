@@ -268,7 +268,7 @@ bool read_panel(const YamlNode& node, const std::vector<ChannelSettings>& channe
   Result<PanelSettings> checked = validate(core);
   if (!checked) {
     const Fault& fault = checked.fault();
-    return reader.fail(node_of(node, fault.where), fault.where + " " + fault.what, fault.allowed);
+    return reader.fail(node_of(node, fault.where), fault.what, fault.allowed);
   }
   core = std::move(checked.value());
   return true;

@@ -193,6 +193,9 @@ std::vector<std::string> not_used(const Settings& settings) {
   if (settings.store_directory) keys.push_back("store");
   if (settings.page_address) keys.push_back("page");
   for (const PanelInput& panel : settings.panels) {
+    if (panel.core.shrinkage.target != ShrinkageTarget::none) {
+      keys.push_back("panels." + panel.core.name + ".shrinkage");
+    }
     if (panel.alerts) keys.push_back("panels." + panel.core.name + ".alerts");
   }
   return keys;
