@@ -1,55 +1,72 @@
 #include "service/assemble/changes.h"
 
-#include <cassert>
 #include <cmath>
+#include <cstdio>
 #include <limits>
 
 namespace tailweir {
+namespace {
 
-bool in_range(double value) {
-  const double magnitude = std::abs(value);
-  return value == 0 || (magnitude >= kSmallestValue && magnitude <= kLargestValue);
+std::string shown(double value) {
+  char text[32];
+  std::snprintf(text, sizeof text, "%g", value);
+  return text;
 }
 
-ChangeAssembler::ChangeAssembler(const std::vector<ChannelSettings>& channels)
-    : bases_(channels.size(), std::numeric_limits<double>::quiet_NaN()) {
-  for (const ChannelSettings& channel : channels) {
-    rules_.push_back({channel.enters_as, channel.step, channel.scale});
-  }
-}
+}  // namespace
 
-ChangeAssembler::Trouble ChangeAssembler::preview(const std::vector<double>& values,
-                                                  std::vector<double>& changes,
-                                                  std::size_t& channel) const {
-  assert(values.size() == rules_.size());
-  changes.resize(values.size());
-  for (channel = 0; channel < values.size(); ++channel) {
-    const Rule& rule = rules_[channel];
-    const double value = values[channel], base = bases_[channel];
-    double change = value;
-    if (!in_range(value)) return Trouble::out_of_range;
-    if (rule.enters_as == EntersAs::level) {
-      if (rule.step != Step::difference && !(value > 0)) return Trouble::not_positive;
-      change = value - base;
-      // ln(x/b) of close levels keeps its digits as log1p((x - b)/b): the difference is exact
-      // there.
-      if (rule.step == Step::log_difference) {
-        change = std::abs(change) < base / 2 ? std::log1p(change / base)
-                                             : std::log(value) - std::log(base);
-      } else if (rule.step == Step::relative_difference) {
-        change /= base;
-      }
+Changes::Changes(const std::vector<ChannelSettings>& channels)
+    : channels_(channels), base_(channels.size(), std::numeric_limits<double>::quiet_NaN()) {}
+
+Result<std::vector<double>> Changes::look(const std::vector<double>& values) const {
+  std::vector<double> changes(values.size(), std::numeric_limits<double>::quiet_NaN());
+  for (std::size_t k = 0; k < values.size(); ++k) {
+    const ChannelSettings& channel = channels_[k];
+    const double x = values[k];
+    const double base = base_[k];
+    if (std::isnan(x)) continue;
+    if (channel.enters_as == EntersAs::change) {
+      changes[k] = channel.scale * x;
+      continue;
     }
-    changes[channel] = rule.scale * change;
-    const bool has_base = rule.enters_as == EntersAs::change || !std::isnan(base);
-    if (has_base && !in_range(changes[channel])) return Trouble::out_of_range;
+    if (channel.step == Step::log_difference && !(x > 0)) {
+      return Fault{channel.name, "level " + shown(x) + " has no logarithm",
+                   "a level above 0 for step log_difference"};
+    }
+    if (channel.step == Step::relative_difference && x == 0) {
+      return Fault{channel.name, "level 0 has no relative change after it",
+                   "a level other than 0 for step relative_difference"};
+    }
+    if (std::isnan(base)) continue;
+    switch (channel.step) {
+      case Step::log_difference:
+        changes[k] = channel.scale * std::log(x / base);
+        break;
+      case Step::difference:
+        changes[k] = channel.scale * (x - base);
+        break;
+      case Step::relative_difference:
+        changes[k] = channel.scale * (x / base - 1);
+        break;
+    }
   }
-  return Trouble::none;
+  return changes;
 }
 
-void ChangeAssembler::commit(const std::vector<double>& values) {
-  assert(values.size() == bases_.size());
-  bases_ = values;
+void Changes::take(const std::vector<double>& values) {
+  for (std::size_t k = 0; k < values.size(); ++k) {
+    if (!std::isnan(values[k]) && channels_[k].enters_as == EntersAs::level) base_[k] = values[k];
+  }
+}
+
+bool Changes::lacks_base(const std::vector<double>& values) const {
+  for (std::size_t k = 0; k < values.size(); ++k) {
+    if (channels_[k].enters_as == EntersAs::level && !std::isnan(values[k]) &&
+        std::isnan(base_[k])) {
+      return true;
+    }
+  }
+  return false;
 }
 
 }  // namespace tailweir

@@ -1,53 +1,37 @@
-// Levels to changes: what a sender gives per channel becomes what the panels estimate.
+// Levels to changes: what a channel's values become before they enter a panel.
 //
-//   log_difference       scale * ln(x_t / x_{t-1})
-//   difference           scale * (x_t - x_{t-1})
-//   relative_difference  scale * (x_t - x_{t-1}) / x_{t-1}
-//   enters as change     scale * x_t
-//
-// The first level of a channel only sets its base and gives no change. A level that has a logarithm
-// or a ratio taken of it must be above 0. Checking and committing are apart, so that a sample
-// refused on any ground leaves the bases alone. Thread rule: one owner. No I/O, no clock.
+// change: scale * value. level: scale * step(value, last value), where the first value of a channel
+// only sets the base:
+//   log_difference       ln(x_t/x_(t-1)), levels > 0
+//   difference           x_t - x_(t-1)
+//   relative_difference  x_t/x_(t-1) - 1, last level not 0
+// A missing level leaves the base as it is: the next change spans the gap. Pure: look() computes,
+// take() remembers; nothing is kept when a sample is refused. Thread rule: one owner.
 #pragma once
 
-#include <cstddef>
-#include <optional>
-#include <string>
 #include <vector>
 
+#include "core/result.h"
 #include "service/settings/settings.h"
 
 namespace tailweir {
 
-// Magnitudes accepted, of values as given and of changes: their squares and the products of two
-// stay representable. 0 is accepted too.
-constexpr double kLargestValue = 1e150;
-constexpr double kSmallestValue = 1e-150;
-bool in_range(double value);
-
-class ChangeAssembler {
+class Changes {
  public:
-  enum class Trouble { none, not_positive, out_of_range };
+  explicit Changes(const std::vector<ChannelSettings>& channels);
 
-  explicit ChangeAssembler(const std::vector<ChannelSettings>& channels);
+  // changes of a sample of levels and changes (one per channel, NaN missing), NaN where there is
+  // none. Fault: a level that its step cannot take.
+  Result<std::vector<double>> look(const std::vector<double>& values) const;
+  // Makes the sample's levels the base of the next.
+  void take(const std::vector<double>& values);
 
-  // changes[i] <- change of channel i from values[i] (one per channel, finite), NaN while the
-  // channel has no base. State unchanged. On trouble, `channel` is the first at fault and changes
-  // are unspecified. O(channels), no allocation once changes has its size.
-  Trouble preview(const std::vector<double>& values, std::vector<double>& changes,
-                  std::size_t& channel) const;
-
-  // Makes the values the next bases. Precondition: preview() of them had no trouble.
-  void commit(const std::vector<double>& values);
+  // True when the last look() had a channel without a base yet.
+  bool lacks_base(const std::vector<double>& values) const;
 
  private:
-  struct Rule {
-    EntersAs enters_as;
-    Step step;
-    double scale;
-  };
-  std::vector<Rule> rules_;
-  std::vector<double> bases_;  // last level, NaN before the first
+  std::vector<ChannelSettings> channels_;
+  std::vector<double> base_;  // NaN before the first level
 };
 
 }  // namespace tailweir

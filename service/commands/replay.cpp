@@ -19,7 +19,7 @@ namespace tailweir {
 namespace {
 
 struct ReplayOptions {
-  std::string settings, from, into, matrices = "alerts";
+  std::string settings, from, into, matrices = "flagged";
   bool overwrite = false, keep_going = false;
 };
 
@@ -95,8 +95,11 @@ class Replay {
   Replay(Settings settings, RecordingReader reader, MatricesPolicy policy)
       : engine_(std::move(settings)),
         reader_(std::move(reader)),
+        policy_(policy),
         lines_(engine_.descriptions(), policy),
-        summary_(engine_.settings(), engine_.descriptions()) {}
+        summary_(engine_.settings(), engine_.descriptions()) {
+    engine_.set_matrices(policy);
+  }
 
   // Finds the column of every channel. False, with the line, when one is not there.
   bool match_columns(std::string& complaint);
@@ -109,13 +112,18 @@ class Replay {
 
   Engine engine_;
   RecordingReader reader_;
+  MatricesPolicy policy_;
   RecordLines lines_;
   RunSummary summary_;
   RunSummary::Run about_;
   std::vector<std::size_t> columns_;  // of each channel of the settings
   Actions actions_;
-  std::vector<std::pair<std::uint32_t, std::uint32_t>> last_;  // panel, horizon of the last sample
-  std::size_t last_from_ = 0;                                  // where its lines start
+  struct Written {
+    std::uint32_t panel, horizon;
+    bool flagged;
+  };
+  std::vector<Written> last_;  // estimate lines of the last sample
+  std::size_t last_from_ = 0;  // where they start
   OutputFile estimates_, flags_, report_;
 };
 
@@ -148,7 +156,7 @@ bool Replay::take(const Actions& actions) {
     summary_.add(record);
     if (const auto* estimate = std::get_if<EstimateRecord>(&record)) {
       lines_.append(record, estimates_.text);
-      last_.emplace_back(estimate->panel, estimate->horizon);
+      last_.push_back({estimate->panel, estimate->horizon, estimate->flagged});
     } else {
       lines_.append(record, flags_.text);
     }
@@ -157,15 +165,17 @@ bool Replay::take(const Actions& actions) {
 }
 
 void Replay::finish_lines() {
-  if (!lines_.policy().wants_last()) return;
+  if (policy_.kind == MatricesPolicy::Kind::never) return;
   estimates_.text.resize(last_from_);
-  for (const auto& [panel, horizon] : last_) {
-    lines_.append(engine_.latest(panel, horizon), true, estimates_.text);
+  for (const auto& [panel, horizon, flagged] : last_) {
+    EstimateRecord record = engine_.latest(panel, horizon);
+    record.flagged = flagged;
+    lines_.append(record, true, estimates_.text);
   }
 }
 
 int Replay::play(bool keep_going) {
-  ProgressBar bar("replay", reader_.bytes_total());
+  ProgressBar bar("replay", reader_.size());
   SampleEvent event;
   event.values.resize(columns_.size());
   for (;;) {
@@ -180,17 +190,16 @@ int Replay::play(bool keep_going) {
     for (std::size_t i = 0; i < columns_.size(); ++i) {
       event.values[i] = sample.value()->values[columns_[i]];
     }
-    engine_.set_matrices(lines_.policy().wants(engine_.sequence() + 1));
     engine_.step(event, actions_);
     if (!actions_.accepted && !keep_going) {
       bar.wipe();
       Fault fault = actions_.refusal.fault;
-      fault.where = reader_.place(sample.value()->line);
+      fault.where = reader_.place(sample.value()->line) + ": " + fault.where;
       about_.ended_early = fault.line();
       return complain(kBadData, about_.ended_early + " (or add --keep-going)");
     }
     if (actions_.accepted && !take(actions_)) return kIoError;
-    bar.show(reader_.bytes_read(), engine_.sequence());
+    bar.show(reader_.position(), engine_.sequence());
   }
 }
 
@@ -250,7 +259,7 @@ void add_replay_command(CLI::App& program, int& exit_code) {
   command
       ->add_option("--matrices", options->matrices,
                    "estimate lines with centre and scatter: every, a number N for every N-th "
-                   "sample, alerts (and the last sample), never")
+                   "sample, flagged (and the last sample), never")
       ->capture_default_str();
   command->add_flag("--overwrite", options->overwrite, "write into a folder that is not empty");
   command->add_flag("--keep-going", options->keep_going,

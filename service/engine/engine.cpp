@@ -1,51 +1,26 @@
 #include "service/engine/engine.h"
 
 #include <algorithm>
-#include <cassert>
 #include <cmath>
-#include <limits>
 #include <map>
-#include <utility>
 
 #include "service/assemble/changes.h"
-#include "service/assemble/time_text.h"
 
 namespace tailweir {
 namespace {
 
-constexpr std::size_t kReasons = static_cast<std::size_t>(RefusalReason::bad_frame) + 1;
+constexpr double kLargest = 1e150;
+constexpr double kSmallest = 1e-150;
 
-std::string number_text(double value) {
+std::string number(double value) {
   char text[32];
-  const int length = std::snprintf(text, sizeof text, "%.6g", value);
-  return std::string(text, static_cast<std::size_t>(length));
+  std::snprintf(text, sizeof text, "%g", value);
+  return text;
 }
 
-// One panel with what the records of its horizons count.
-struct Lane {
-  explicit Lane(const PanelInput& input)
-      : panel(input.core),
-        inputs(input.channels),
-        x(static_cast<Index>(input.channels.size())),
-        flagged(input.core.horizons.size()),
-        scored(input.core.horizons.size()) {}
-
-  // Fills x with the panel's changes; false while one of them has no base yet.
-  bool gather(const std::vector<double>& changes) {
-    for (std::size_t i = 0; i < inputs.size(); ++i) {
-      x(static_cast<Index>(i)) = changes[inputs[i]];
-    }
-    return x.allFinite();
-  }
-
-  Panel panel;
-  std::vector<std::size_t> inputs;
-  Eigen::VectorXd x;
-  std::vector<std::uint64_t> flagged;  // flags raised, by horizon
-  std::vector<std::uint64_t> scored;   // samples that had a p-value, by horizon
-  std::uint64_t sequence = 0;          // of the last sample pushed
-  std::int64_t time_ns = 0;
-};
+Refusal refuse(RefusalReason reason, std::string where, std::string what, std::string allowed) {
+  return {reason, {std::move(where), std::move(what), std::move(allowed)}};
+}
 
 }  // namespace
 
@@ -75,200 +50,202 @@ const char* name_of(RefusalReason reason) {
 
 void Actions::clear() {
   records.clear();
-  accepted = duplicate = false;
+  accepted = false;
+  duplicate = false;
   refusal = {};
 }
 
 struct Engine::Body {
-  explicit Body(Settings given) : settings(std::move(given)), assembler(settings.channels) {
+  explicit Body(Settings given) : settings(std::move(given)), changes(settings.channels) {
     for (const PanelInput& input : settings.panels) {
-      lanes.emplace_back(input);
+      panels.emplace_back(input.core);
       PanelDescription description;
       description.name = input.core.name;
-      for (const std::size_t channel : input.channels) {
-        description.channels.push_back(settings.channels[channel].name);
+      for (const std::size_t k : input.channels) {
+        description.channels.push_back(settings.channels[k].name);
       }
       for (const HorizonSettings& horizon : input.core.horizons) {
         description.horizons.push_back(horizon.name);
       }
       descriptions.push_back(std::move(description));
+      inputs.emplace_back(static_cast<Index>(input.channels.size()));
+      flagged.emplace_back(input.core.horizons.size(), 0);
+      scored.emplace_back(input.core.horizons.size(), 0);
     }
-    counters.refused_by_reason.resize(kReasons);
+    counters.refused_by_reason.assign(static_cast<std::size_t>(RefusalReason::bad_frame) + 1, 0);
   }
 
-  Refusal refuse(RefusalReason reason, std::string what, std::string allowed) const {
-    return {reason, Fault{"", std::move(what), std::move(allowed)}};
-  }
-  Refusal refuse_value(RefusalReason reason, std::size_t channel, const std::string& what,
-                       std::string allowed) const {
-    return refuse(reason, "channel " + settings.channels[channel].name + ": " + what,
-                  std::move(allowed));
-  }
-
-  Refusal check_values(const std::vector<double>& values) const;
-  Refusal check(const SampleEvent& event);
-  void publish(std::uint32_t index, std::vector<Record>& records);
-  EstimateRecord estimate_record(std::uint32_t panel, std::uint32_t horizon,
-                                 bool with_matrices) const;
+  Refusal check(const SampleEvent& event, std::vector<double>& change) const;
+  void push(const SampleEvent& event, const std::vector<double>& change, Actions& actions);
+  void fill_matrices(std::size_t panel, Index horizon, EstimateRecord& record) const;
 
   Settings settings;
-  ChangeAssembler assembler;
-  std::vector<Lane> lanes;
+  Changes changes;
+  std::vector<Panel> panels;
   std::vector<PanelDescription> descriptions;
+  std::vector<Eigen::VectorXd> inputs;
+  std::vector<std::vector<std::uint64_t>> flagged, scored;
+  std::map<std::string, std::uint64_t> next_sequence;
   EngineCounters counters;
-  std::map<std::string, std::uint64_t> expected;  // next sequence, by sender
+  MatricesPolicy matrices;
   std::uint64_t sequence = 0;
-  std::int64_t last_time_ns = std::numeric_limits<std::int64_t>::min();
-  std::vector<double> changes;
-  bool matrices = true;
-  mutable Eigen::MatrixXd scatter;
-  mutable Eigen::VectorXd centre;
+  std::int64_t last_time_ns = 0;
 };
-
-Refusal Engine::Body::check_values(const std::vector<double>& values) const {
-  if (values.size() != settings.channels.size()) {
-    return refuse(RefusalReason::wrong_count,
-                  "a sample has " + std::to_string(values.size()) + " values",
-                  "one per channel: " + std::to_string(settings.channels.size()));
-  }
-  for (std::size_t i = 0; i < values.size(); ++i) {
-    if (std::isinf(values[i])) {
-      return refuse_value(RefusalReason::not_finite, i, "the value is infinite",
-                          "send finite numbers");
-    }
-    if (std::isnan(values[i])) {
-      return refuse_value(RefusalReason::missing, i, "the value is missing",
-                          "this version needs every channel in every sample");
-    }
-  }
-  return {};
-}
-
-// Fills changes. Alters nothing else.
-Refusal Engine::Body::check(const SampleEvent& event) {
-  Refusal refusal = check_values(event.values);
-  if (refusal.reason != RefusalReason::none) return refusal;
-  if (event.time_ns < last_time_ns) {
-    return refuse(RefusalReason::time_backwards,
-                  "time " + time_text(event.time_ns) + " goes back, the last sample has " +
-                      time_text(last_time_ns),
-                  "send samples in the order of their times");
-  }
-  std::size_t channel = 0;
-  switch (assembler.preview(event.values, changes, channel)) {
-    case ChangeAssembler::Trouble::none:
-      return {};
-    case ChangeAssembler::Trouble::not_positive:
-      return refuse_value(
-          RefusalReason::not_positive, channel,
-          "the level " + number_text(event.values[channel]) + " has no logarithm or ratio",
-          "send levels above 0, or set step: difference");
-    case ChangeAssembler::Trouble::out_of_range:
-      break;
-  }
-  return refuse_value(
-      RefusalReason::out_of_range, channel,
-      "the value " + number_text(event.values[channel]) + " or its change is out of range",
-      "magnitudes are 0, or from 1e-150 to 1e150");
-}
-
-EstimateRecord Engine::Body::estimate_record(std::uint32_t panel, std::uint32_t horizon,
-                                             bool with_matrices) const {
-  const Lane& lane = lanes[panel];
-  EstimateRecord record;
-  record.sequence = lane.sequence;
-  record.time_ns = lane.time_ns;
-  record.panel = panel;
-  record.horizon = horizon;
-  record.channels_version = descriptions[panel].channels_version;
-  record.estimate = lane.panel.estimate(horizon);
-  if (!with_matrices || !lane.panel.scatter(horizon, scatter, centre)) return record;
-  const Index p = lane.panel.channels();
-  record.centre.assign(centre.data(), centre.data() + p);
-  record.scatter.reserve(static_cast<std::size_t>(p * (p + 1) / 2));
-  for (Index i = 0; i < p; ++i) {
-    for (Index j = 0; j <= i; ++j) record.scatter.push_back(scatter(i, j));
-  }
-  return record;
-}
-
-void Engine::Body::publish(std::uint32_t index, std::vector<Record>& records) {
-  Lane& lane = lanes[index];
-  for (std::uint32_t h = 0; h < lane.scored.size(); ++h) {
-    records.emplace_back(estimate_record(index, h, matrices));
-    if (!std::isnan(lane.panel.estimate(h).p_value)) ++lane.scored[h];
-  }
-  for (const Flag& flag : lane.panel.flags()) {
-    const auto h = static_cast<std::size_t>(flag.horizon);
-    FlagRecord record;
-    record.sequence = lane.sequence;
-    record.time_ns = lane.time_ns;
-    record.panel = index;
-    record.horizon = static_cast<std::uint32_t>(h);
-    record.flag = flag;
-    record.flagged = ++lane.flagged[h];
-    record.flagged_expected =
-        static_cast<double>(lane.scored[h]) * lane.panel.settings().flags.rate;
-    records.emplace_back(std::move(record));
-  }
-}
 
 Engine::Engine(Settings settings) : body_(std::make_unique<Body>(std::move(settings))) {}
 Engine::~Engine() = default;
 Engine::Engine(Engine&&) noexcept = default;
 
+Refusal Engine::Body::check(const SampleEvent& event, std::vector<double>& change) const {
+  const std::size_t count = settings.channels.size();
+  if (event.values.size() != count) {
+    return refuse(RefusalReason::wrong_count, "sample",
+                  "has " + std::to_string(event.values.size()) + " values",
+                  "one for each of the " + std::to_string(count) + " channels");
+  }
+  for (std::size_t k = 0; k < count; ++k) {
+    const double x = event.values[k];
+    const std::string& name = settings.channels[k].name;
+    if (std::isnan(x)) {
+      return refuse(RefusalReason::missing, name, "the value is missing",
+                    "a finite number (this version does not take missing values)");
+    }
+    if (std::isinf(x)) {
+      return refuse(RefusalReason::not_finite, name, "the value is infinite", "a finite number");
+    }
+    if (std::abs(x) > kLargest || (x != 0 && std::abs(x) < kSmallest)) {
+      return refuse(RefusalReason::out_of_range, name,
+                    "the value " + number(x) + " is out of range",
+                    "0, or a size from 1e-150 to 1e150");
+    }
+  }
+  if (sequence > 0 && event.time_ns < last_time_ns) {
+    return refuse(RefusalReason::time_backwards, "time",
+                  std::to_string(event.time_ns) + " ns is before the last sample's " +
+                      std::to_string(last_time_ns) + " ns",
+                  "samples in order of time");
+  }
+  Result<std::vector<double>> looked = changes.look(event.values);
+  if (!looked) return {RefusalReason::not_positive, looked.fault()};
+  change = std::move(looked.value());
+  for (std::size_t k = 0; k < count; ++k) {
+    if (std::isnan(change[k])) continue;  // first level of the channel
+    if (!(std::abs(change[k]) <= kLargest)) {
+      return refuse(RefusalReason::out_of_range, settings.channels[k].name,
+                    "the change " + number(change[k]) + " is out of range", "a size up to 1e150");
+    }
+  }
+  return {};
+}
+
 void Engine::step(const SampleEvent& event, Actions& actions) {
   actions.clear();
-  const std::uint64_t next = next_of(event.sender);
-  if (event.sender_sequence != 0 && event.sender_sequence < next) {
-    actions.accepted = actions.duplicate = true;
-    ++body_->counters.duplicates;
-    return;
+  Body& b = *body_;
+  if (event.sender_sequence > 0) {
+    const std::uint64_t next = next_of(event.sender);
+    if (event.sender_sequence < next) {
+      actions.accepted = actions.duplicate = true;
+      ++b.counters.duplicates;
+      return;
+    }
+    if (event.sender_sequence > next) {
+      actions.refusal = refuse(RefusalReason::sequence_gap, "sender " + event.sender,
+                               "sample " + std::to_string(event.sender_sequence) + " came before " +
+                                   std::to_string(next),
+                               "samples from " + std::to_string(next) + " on");
+      ++b.counters.refused;
+      ++b.counters.refused_by_reason[static_cast<std::size_t>(RefusalReason::sequence_gap)];
+      return;
+    }
+    b.next_sequence[event.sender] = next + 1;
   }
-  if (event.sender_sequence > next) {
-    actions.refusal = body_->refuse(RefusalReason::sequence_gap,
-                                    "sample " + std::to_string(event.sender_sequence) +
-                                        " of sender " + event.sender + " came too early",
-                                    "send " + std::to_string(next) + " next");
-  } else {
-    actions.refusal = body_->check(event);
-  }
+  std::vector<double> change;
+  actions.refusal = b.check(event, change);
   if (actions.refusal.reason != RefusalReason::none) {
-    ++body_->counters.refused;
-    ++body_->counters.refused_by_reason[static_cast<std::size_t>(actions.refusal.reason)];
+    ++b.counters.refused;
+    ++b.counters.refused_by_reason[static_cast<std::size_t>(actions.refusal.reason)];
     return;
   }
+  b.push(event, change, actions);
+}
+
+void Engine::Body::push(const SampleEvent& event, const std::vector<double>& change,
+                        Actions& actions) {
+  const bool base_only = changes.lacks_base(event.values);
+  changes.take(event.values);
+  ++sequence;
+  ++counters.accepted;
+  last_time_ns = event.time_ns;
   actions.accepted = true;
-  ++body_->counters.accepted;
-  if (event.sender_sequence != 0) body_->expected[event.sender] = next + 1;
-  body_->assembler.commit(event.values);
-  body_->last_time_ns = event.time_ns;
-  ++body_->sequence;
-  for (std::uint32_t i = 0; i < body_->lanes.size(); ++i) {
-    Lane& lane = body_->lanes[i];
-    if (!lane.gather(body_->changes)) continue;
-    lane.panel.push(lane.x, event.time_ns);
-    lane.sequence = body_->sequence;
-    lane.time_ns = event.time_ns;
-    body_->publish(i, actions.records);
+  if (base_only) return;  // the first levels: there is no change yet
+  for (std::size_t k = 0; k < panels.size(); ++k) {
+    const std::vector<std::size_t>& which = settings.panels[k].channels;
+    for (std::size_t j = 0; j < which.size(); ++j) {
+      inputs[k](static_cast<Index>(j)) = change[which[j]];
+    }
+    panels[k].push(inputs[k], event.time_ns);
+    for (Index h = 0; h < panels[k].horizons(); ++h) {
+      EstimateRecord record;
+      record.sequence = sequence;
+      record.time_ns = event.time_ns;
+      record.panel = static_cast<std::uint32_t>(k);
+      record.horizon = static_cast<std::uint32_t>(h);
+      record.channels_version = descriptions[k].channels_version;
+      record.estimate = panels[k].estimate(h);
+      for (const Flag& flag : panels[k].flags()) record.flagged |= flag.horizon == h;
+      if (!std::isnan(record.estimate.p_value)) ++scored[k][static_cast<std::size_t>(h)];
+      if (matrices.wants(sequence, record.flagged)) fill_matrices(k, h, record);
+      actions.records.emplace_back(std::move(record));
+    }
+    for (const Flag& flag : panels[k].flags()) {
+      const std::size_t h = static_cast<std::size_t>(flag.horizon);
+      FlagRecord record;
+      record.sequence = sequence;
+      record.time_ns = event.time_ns;
+      record.panel = static_cast<std::uint32_t>(k);
+      record.horizon = static_cast<std::uint32_t>(h);
+      record.flag = flag;
+      record.flagged = ++flagged[k][h];
+      record.flagged_expected =
+          settings.panels[k].core.flags.rate * static_cast<double>(scored[k][h]);
+      actions.records.emplace_back(std::move(record));
+    }
   }
 }
 
-void Engine::set_matrices(bool on) { body_->matrices = on; }
+void Engine::Body::fill_matrices(std::size_t panel, Index horizon, EstimateRecord& record) const {
+  Eigen::MatrixXd s;
+  Eigen::VectorXd m;
+  if (!panels[panel].scatter(horizon, s, m)) return;
+  record.centre.assign(m.data(), m.data() + m.size());
+  record.scatter.reserve(static_cast<std::size_t>(s.rows() * (s.rows() + 1) / 2));
+  for (Index i = 0; i < s.rows(); ++i) {
+    for (Index j = 0; j <= i; ++j) record.scatter.push_back(s(i, j));
+  }
+}
+
+void Engine::set_matrices(const MatricesPolicy& policy) { body_->matrices = policy; }
 const Settings& Engine::settings() const { return body_->settings; }
 const std::vector<PanelDescription>& Engine::descriptions() const { return body_->descriptions; }
 const EngineCounters& Engine::counters() const { return body_->counters; }
 std::uint64_t Engine::sequence() const { return body_->sequence; }
-std::int64_t Engine::last_time_ns() const { return body_->sequence == 0 ? 0 : body_->last_time_ns; }
+std::int64_t Engine::last_time_ns() const { return body_->last_time_ns; }
 
 std::uint64_t Engine::next_of(const std::string& sender) const {
-  const auto found = body_->expected.find(sender);
-  return found == body_->expected.end() ? 1 : found->second;
+  const auto found = body_->next_sequence.find(sender);
+  return found == body_->next_sequence.end() ? 1 : found->second;
 }
 
 EstimateRecord Engine::latest(std::uint32_t panel, std::uint32_t horizon) const {
-  assert(panel < body_->lanes.size());
-  return body_->estimate_record(panel, horizon, true);
+  EstimateRecord record;
+  record.sequence = body_->sequence;
+  record.time_ns = body_->last_time_ns;
+  record.panel = panel;
+  record.horizon = horizon;
+  record.channels_version = body_->descriptions[panel].channels_version;
+  record.estimate = body_->panels[panel].estimate(static_cast<Index>(horizon));
+  body_->fill_matrices(panel, static_cast<Index>(horizon), record);
+  return record;
 }
 
 }  // namespace tailweir

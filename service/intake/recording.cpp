@@ -10,7 +10,7 @@
 #include <cstring>
 #include <limits>
 
-#include "service/assemble/time_text.h"
+#include "service/intake/time_text.h"
 #include "service/settings/names.h"
 
 namespace tailweir {
@@ -64,7 +64,7 @@ Result<RecordingReader> RecordingReader::open(const std::string& path, bool* unr
   }
   struct stat status {};
   if (fstat(fileno(reader.file_.get()), &status) == 0 && S_ISREG(status.st_mode)) {
-    reader.bytes_total_ = static_cast<std::uint64_t>(status.st_size);
+    reader.size_ = static_cast<std::uint64_t>(status.st_size);
   }
   const std::optional<Fault> fault = reader.read_header();
   if (unreadable != nullptr) *unreadable = reader.unreadable_;
@@ -75,7 +75,7 @@ Result<RecordingReader> RecordingReader::open(const std::string& path, bool* unr
 Result<RecordingReader> RecordingReader::from_text(std::string text, std::string name) {
   RecordingReader reader;
   reader.name_ = std::move(name);
-  reader.bytes_total_ = text.size();
+  reader.size_ = text.size();
   reader.buffer_ = std::move(text);
   reader.exhausted_ = true;
   const std::optional<Fault> fault = reader.read_header();
@@ -157,7 +157,7 @@ RecordingReader::Fetch RecordingReader::fetch_row() {
   line_ = next_line_;
   next_line_ += 1 + static_cast<std::size_t>(std::count(row_.begin(), row_.end(), '\n'));
   const std::size_t after = complete ? end + 1 : end;
-  bytes_read_ += after - start_;
+  position_ += after - start_;
   start_ = after;
   if (!row_.empty() && row_.back() == '\r') row_.remove_suffix(1);
   return Fetch::row;
@@ -202,7 +202,7 @@ std::optional<Fault> RecordingReader::read_header() {
     if (!refill()) return fault_;
   }
   if (buffer_.compare(0, 3, "\xef\xbb\xbf") == 0) start_ = 3;
-  bytes_read_ = start_;
+  position_ = start_;
   const Fetch fetched = fetch_row();
   if (fetched == Fetch::fault) return fault_;
   if (fetched == Fetch::end) return fail(fault_at(1, "is empty", shape));
@@ -271,20 +271,19 @@ Result<std::optional<RecordedSample>> RecordingReader::next() {
   if (fetched == Fetch::end) return std::optional<RecordedSample>();
   if (!split_row()) return *fault_;
   if (cells_.size() != channels_.size() + 1) {
-    return fail(fault_at(line_, "has " + std::to_string(cells_.size()) + " cells",
-                         "the header names " + std::to_string(channels_.size() + 1)));
+    return fault_at(line_, "has " + std::to_string(cells_.size()) + " cells",
+                    "the header names " + std::to_string(channels_.size() + 1));
   }
   const std::string_view when = trimmed(cells_[0]);
-  const Result<std::int64_t> time = parse_time(when);
+  const Result<std::int64_t> time = read_time(when);
   if (!time) {
-    return fail(
-        fault_at(line_, "time " + quoted(when) + " " + time.fault().what, time.fault().allowed));
+    return fault_at(line_, "time " + quoted(when) + " " + time.fault().what, time.fault().allowed);
   }
   if (last_time_ && time.value() < *last_time_) {
-    return fail(fault_at(
+    return fault_at(
         line_,
-        "time " + std::string(when) + " goes back, the row before has " + time_text(*last_time_),
-        "sort the rows by time"));
+        "time " + std::string(when) + " goes back, the row before has " + format_time(*last_time_),
+        "sort the rows by time");
   }
   RecordedSample sample;
   sample.time_ns = time.value();
@@ -292,7 +291,7 @@ Result<std::optional<RecordedSample>> RecordingReader::next() {
   sample.values.reserve(channels_.size());
   for (std::size_t i = 0; i < channels_.size(); ++i) {
     const Result<double> value = number(cells_[i + 1], i);
-    if (!value) return fail(value.fault());
+    if (!value) return value.fault();
     sample.values.push_back(value.value());
   }
   last_time_ = sample.time_ns;

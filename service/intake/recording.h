@@ -3,7 +3,7 @@
 //   time,copper,tin
 //   2026-03-01T09:30:00Z,0.0012,-0.0004
 //
-// time is RFC 3339, a bare date, or whole nanoseconds since 1970 (service/assemble/time_text.h). An
+// time is RFC 3339, a bare date, or whole nanoseconds since 1970 (service/intake/time_text.h). An
 // empty cell, `nan` or `NA` is a missing value. CRLF, a UTF-8 mark at the start and quoted cells
 // are accepted; empty lines only at the end. Refused with FILE:LINE: a ragged row, a word for a
 // number, an infinite or unrepresentable number, time going backwards, duplicate or bad channel
@@ -42,18 +42,21 @@ class RecordingReader {
   // Names in the header's order.
   const std::vector<std::string>& channels() const { return channels_; }
 
-  // The next sample, nothing at the end, or a Fault; after a Fault the reader stays at it. No
-  // allocation but the sample's values, once the longest row has been seen.
+  // The next sample, nothing at the end, or a Fault. A row whose cells are wrong is behind the
+  // reader after its Fault: the rest is still readable. After a broken quote, an empty line or an
+  // I/O error the reader stays at the Fault. No allocation but the sample's values, once the
+  // longest row has been seen.
   Result<std::optional<RecordedSample>> next();
 
   // Whether the last Fault came from the machine (see open).
   bool unreadable() const { return unreadable_; }
   // "FILE:LINE" of a sample, for messages about it.
   std::string place(std::size_t line) const;
-  // Bytes handed out so far, and in the whole file (0 when it is no regular file): for progress
-  // bars.
-  std::uint64_t bytes_read() const { return bytes_read_; }
-  std::uint64_t bytes_total() const { return bytes_total_; }
+  // The file as messages name it.
+  const std::string& name() const { return name_; }
+  // Bytes handed out so far, and in the whole file (0 when it is no regular file).
+  std::uint64_t position() const { return position_; }
+  std::uint64_t size() const { return size_; }
 
  private:
   struct Closer {
@@ -87,7 +90,7 @@ class RecordingReader {
   std::optional<std::int64_t> last_time_;
   std::optional<Fault> fault_;
   bool unreadable_ = false;
-  std::uint64_t bytes_read_ = 0, bytes_total_ = 0;
+  std::uint64_t position_ = 0, size_ = 0;
 };
 
 }  // namespace tailweir

@@ -5,7 +5,8 @@
 #include <charconv>
 #include <cmath>
 
-#include "service/assemble/time_text.h"
+#include "service/intake/time_text.h"
+#include "service/settings/names.h"
 
 namespace tailweir {
 namespace {
@@ -73,9 +74,7 @@ void put_head(std::uint64_t sequence, std::int64_t time_ns, std::string& out) {
   out += "{\"sequence\":";
   put_whole(sequence, out);
   out += ",\"time\":\"";
-  const std::size_t at = out.size();
-  out.resize(at + kTimeTextLength);
-  format_time(time_ns, out.data() + at);
+  append_time(out, time_ns);
   out += '"';
 }
 
@@ -143,35 +142,33 @@ const char* name_of(Severity severity) {
 
 Result<MatricesPolicy> parse_matrices_policy(const std::string& text) {
   MatricesPolicy policy;
-  if (text == "alerts") return policy;
+  if (text == "every") return policy;
   if (text == "never") {
-    policy.when = MatricesPolicy::When::never;
+    policy.kind = MatricesPolicy::Kind::never;
     return policy;
   }
-  policy.when = MatricesPolicy::When::every;
-  if (text == "every") return policy;
+  if (text == "flagged" || text == "alerts") {
+    policy.kind = MatricesPolicy::Kind::flagged;
+    return policy;
+  }
   const char* end = text.data() + text.size();
   const auto [stop, error] = std::from_chars(text.data(), end, policy.every);
   if (error == std::errc() && stop == end && policy.every > 0) return policy;
-  return Fault{"--matrices", "\"" + text + "\" is no choice",
-               "write every, a whole number, alerts or never"};
+  return Fault{"--matrices", quoted(text) + " is no choice",
+               "write every, a whole number, flagged or never"};
 }
 
-RecordLines::RecordLines(const std::vector<PanelDescription>& descriptions, MatricesPolicy policy)
-    : policy_(policy) {
+RecordLines::RecordLines(const std::vector<PanelDescription>& descriptions, MatricesPolicy matrices)
+    : matrices_(matrices) {
   for (const PanelDescription& description : descriptions) {
     Pieces pieces;
     for (const std::string& horizon : description.horizons) {
       pieces.panel_and_horizon.push_back(",\"panel\":" + json_text(description.name) +
                                          ",\"horizon\":" + json_text(horizon));
     }
-    pieces.channels = "[";
     for (const std::string& channel : description.channels) {
       pieces.channel.push_back(json_text(channel));
-      if (pieces.channel.size() > 1) pieces.channels += ',';
-      pieces.channels += pieces.channel.back();
     }
-    pieces.channels += ']';
     pieces_.push_back(std::move(pieces));
   }
 }
@@ -201,7 +198,7 @@ bool RecordLines::knows(const Record& record) const {
 
 void RecordLines::append(const Record& record, std::string& out) const {
   if (const auto* estimate = std::get_if<EstimateRecord>(&record)) {
-    append(*estimate, policy_.wants(estimate->sequence), out);
+    append(*estimate, matrices_.wants(estimate->sequence, estimate->flagged), out);
   } else {
     append(*std::get_if<FlagRecord>(&record), out);
   }
@@ -220,7 +217,7 @@ void RecordLines::append(const EstimateRecord& record, bool matrices, std::strin
   put_word(",\"state\":", name_of(e.state), out);
   put_word(",\"state_reason\":", name_of(e.reason), out);
   out += ",\"channels\":";
-  out += pieces.channels;
+  put_whole(pieces.channel.size(), out);
   out += ",\"channels_version\":";
   put_whole(record.channels_version, out);
   put(",\"nu\":", of_fit(e.nu), out);
@@ -242,7 +239,7 @@ void RecordLines::append(const EstimateRecord& record, bool matrices, std::strin
   put(",\"p_value\":", of_fit(e.p_value), out);
   put(",\"coverage\":", e.coverage, out);
   put(",\"condition\":", of_fit(e.condition), out);
-  out += "}\n";
+  out += record.flagged ? ",\"flagged\":true}\n" : ",\"flagged\":false}\n";
 }
 
 void RecordLines::append(const FlagRecord& record, std::string& out) const {
@@ -253,6 +250,9 @@ void RecordLines::append(const FlagRecord& record, std::string& out) const {
   put(",\"distance\":", record.flag.distance, out);
   put(",\"p_value\":", record.flag.p_value, out);
   put_word(",\"severity\":", name_of(record.flag.severity), out);
+  out += ",\"flagged\":";
+  put_whole(record.flagged, out);
+  put(",\"flagged_expected\":", record.flagged_expected, out);
   out += ",\"channels\":[";
   for (std::size_t i = 0; i < record.flag.channels.size(); ++i) {
     const ChannelBlame& blame = record.flag.channels[i];
@@ -264,10 +264,7 @@ void RecordLines::append(const FlagRecord& record, std::string& out) const {
     put(",\"p_value\":", blame.p_value, out);
     out += '}';
   }
-  out += "],\"flagged\":";
-  put_whole(record.flagged, out);
-  put(",\"flagged_expected\":", record.flagged_expected, out);
-  out += "}\n";
+  out += "]}\n";
 }
 
 }  // namespace tailweir

@@ -10,9 +10,11 @@
 
 #include <cstdint>
 #include <string>
+#include <type_traits>
 #include <vector>
 
 #include "core/result.h"
+#include "service/engine/engine.h"
 #include "service/engine/records.h"
 
 namespace tailweir {
@@ -22,47 +24,50 @@ const char* name_of(StateReason reason);
 const char* name_of(tail::NuStatus status);
 const char* name_of(Severity severity);
 
-// Which estimate lines carry centre and scatter; they dominate the size of the output.
-struct MatricesPolicy {
-  enum class When { every, at_alerts, never };
-  When when = When::at_alerts;  // alerts, and the last sample
-  std::uint64_t every = 1;      // for When::every: samples whose sequence is a multiple of it
-
-  bool wants(std::uint64_t sequence) const { return when == When::every && sequence % every == 0; }
-  bool wants_last() const { return when != When::never; }
-};
-// Reads "every", a whole number N > 0, "alerts" or "never".
+// Reads "every", a whole number N > 0, "flagged" (also "alerts", until there are any) or "never".
 Result<MatricesPolicy> parse_matrices_policy(const std::string& text);
 
 class RecordLines {
  public:
-  RecordLines(const std::vector<PanelDescription>& descriptions, MatricesPolicy policy);
+  // matrices: which estimate lines carry centre and scatter (null on the others).
+  RecordLines(const std::vector<PanelDescription>& descriptions, MatricesPolicy matrices);
 
   // Whether the descriptions have every name the record refers to, and its arrays fit.
   bool knows(const Record& record) const;
   bool knows(const EstimateRecord& record) const;
   bool knows(const FlagRecord& record) const;
 
-  // Appends the line of a record, line feed included; matrices as the policy says. Precondition:
-  // knows(record). About 1 us and no allocation once `out` has room.
+  // Appends the line of a record, line feed included. Precondition: knows(record). No allocation
+  // once `out` has room.
   void append(const Record& record, std::string& out) const;
+  void append(const FlagRecord& record, std::string& out) const;
   // The same with the policy overruled.
   void append(const EstimateRecord& record, bool matrices, std::string& out) const;
-  void append(const FlagRecord& record, std::string& out) const;
 
-  const MatricesPolicy& policy() const { return policy_; }
+  // The record's line without its line feed; valid until the next call.
+  template <typename AnyRecord>
+  const std::string& line(const AnyRecord& record) {
+    text_.clear();
+    if constexpr (std::is_same_v<AnyRecord, EstimateRecord>) {
+      append(record, matrices_.wants(record.sequence, record.flagged), text_);
+    } else {
+      append(record, text_);
+    }
+    text_.pop_back();
+    return text_;
+  }
 
  private:
   // Ready-made pieces of text of one panel.
   struct Pieces {
     std::vector<std::string> panel_and_horizon;  // ,"panel":"metals","horizon":"slow"
-    std::string channels;                        // ["copper","tin"]
     std::vector<std::string> channel;            // "copper"
   };
   bool has(std::uint32_t panel, std::uint32_t horizon) const;
 
   std::vector<Pieces> pieces_;
-  MatricesPolicy policy_;
+  MatricesPolicy matrices_;
+  std::string text_;
 };
 
 }  // namespace tailweir

@@ -5,7 +5,7 @@
 #include <cstdarg>
 #include <cstdio>
 
-#include "service/assemble/time_text.h"
+#include "service/intake/time_text.h"
 #include "service/report/record_lines.h"
 
 namespace tailweir {
@@ -120,7 +120,7 @@ std::string RunSummary::panel_text(std::size_t panel) const {
 std::string RunSummary::flag_text(const LargestFlag& flag) const {
   const FlagRecord& record = flag.record;
   const PanelDescription& description = descriptions_[record.panel];
-  std::string text = "  " + time_text(record.time_ns) + "  sample " +
+  std::string text = "  " + format_time(record.time_ns) + "  sample " +
                      std::to_string(record.sequence) + "  panel " + description.name + "  horizon";
   for (std::size_t i = 0; i < flag.horizons.size(); ++i) {
     text += (i == 0 ? " " : ", ") + description.horizons[flag.horizons[i]];
@@ -147,7 +147,8 @@ std::string RunSummary::text(const Run& run, const EngineCounters& counters) con
                    name_of(static_cast<RefusalReason>(i)));
   }
   if (!empty_) {
-    text += "time       " + time_text(first_time_ns_) + " to " + time_text(last_time_ns_) + "\n";
+    text +=
+        "time       " + format_time(first_time_ns_) + " to " + format_time(last_time_ns_) + "\n";
   }
   for (std::size_t i = 0; i < run.unused_columns.size(); ++i) {
     text += (i == 0 ? "unused     column " : "           column ") + run.unused_columns[i] + "\n";

@@ -208,9 +208,17 @@ bool read_flags(const YamlNode& node, ValueReader& reader, FlagSettings& out) {
 
 bool read_alerts(const YamlNode& node, ValueReader& reader, AlertSettings& out) {
   if (!reader.map(node, "alerts", {"mean_samples_between_false"})) return false;
+  out.given = true;
   const YamlNode* mean = node.find("mean_samples_between_false");
-  return mean == nullptr ||
-         reader.positive(*mean, "mean_samples_between_false", out.mean_samples_between_false);
+  if (mean == nullptr) return true;
+  double value = 0;
+  if (!reader.number(*mean, "mean_samples_between_false", value)) return false;
+  if (!(value > 100)) {
+    return reader.fail(*mean, "mean_samples_between_false is " + mean->text,
+                       "write a number above 100, such as 5000");
+  }
+  out.mean_samples_between_false = value;
+  return true;
 }
 
 // The node that a key of core's validate() speaks of, such as "horizons.slow.window"; the deepest
@@ -264,7 +272,7 @@ bool read_panel(const YamlNode& node, const std::vector<ChannelSettings>& channe
   part = node.find("flags");
   if (part != nullptr && !read_flags(*part, reader, core.flags)) return false;
   part = node.find("alerts");
-  if (part != nullptr && !read_alerts(*part, reader, out.alerts.emplace())) return false;
+  if (part != nullptr && !read_alerts(*part, reader, out.alerts)) return false;
   Result<PanelSettings> checked = validate(core);
   if (!checked) {
     const Fault& fault = checked.fault();

@@ -38,6 +38,7 @@ bool read_feed(const YamlNode& node, ValueReader& reader, FeedSettings& out) {
 }
 
 bool read_channel(const YamlNode& node, ValueReader& reader, ChannelSettings& out) {
+  if (node.kind == YamlNode::Kind::scalar) return reader.name(node, "a channel", out.name);
   if (!reader.map(node, "a channel", {"name", "enters_as", "step", "unit", "scale"}, {"name"}) ||
       !reader.name(*node.find("name"), "name", out.name)) {
     return false;
@@ -72,7 +73,9 @@ bool read_channels(const YamlNode& node, ValueReader& reader, Settings& out) {
     if (!read_channel(item, reader, channel)) return false;
     for (const ChannelSettings& other : out.channels) {
       if (other.name != channel.name) continue;
-      return reader.fail(*item.find("name"), "channel " + quoted(channel.name) + " stands twice",
+      const YamlNode* name = item.find("name");
+      return reader.fail(name != nullptr ? *name : item,
+                         "channel " + quoted(channel.name) + " stands twice",
                          "give each channel its own name");
     }
     out.channels.push_back(std::move(channel));
@@ -196,7 +199,7 @@ std::vector<std::string> not_used(const Settings& settings) {
     if (panel.core.shrinkage.target != ShrinkageTarget::none) {
       keys.push_back("panels." + panel.core.name + ".shrinkage");
     }
-    if (panel.alerts) keys.push_back("panels." + panel.core.name + ".alerts");
+    if (panel.alerts.given) keys.push_back("panels." + panel.core.name + ".alerts");
   }
   return keys;
 }

@@ -26,13 +26,14 @@ struct ChannelSettings {
 };
 
 struct AlertSettings {
-  double mean_samples_between_false = 5000;  // > 0
+  bool given = false;                        // the key was present
+  double mean_samples_between_false = 5000;  // > 100, all kinds and directions together
 };
 
 struct PanelInput {
   std::vector<std::size_t> channels;  // indices into Settings::channels, in the panel's order
   PanelSettings core;                 // name, horizons and all that the core needs
-  std::optional<AlertSettings> alerts;
+  AlertSettings alerts;
 };
 
 struct FeedSettings {

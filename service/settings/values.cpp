@@ -43,7 +43,7 @@ bool time_length(std::string_view text, double& seconds) {
   const struct {
     std::string_view unit;
     double seconds;
-  } units[] = {{"ms", 1e-3}, {"s", 1}, {"min", 60}, {"h", 3600}, {"d", 86400}};
+  } units[] = {{"ms", 1e-3}, {"s", 1}, {"m", 60}, {"min", 60}, {"h", 3600}, {"d", 86400}};
   const std::size_t digits_end = text.find_first_not_of("+-0123456789.");
   if (digits_end == text.npos) return false;
   double value = 0;

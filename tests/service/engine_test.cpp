@@ -55,7 +55,7 @@ std::vector<SampleEvent> feed(int count) {
 }
 
 std::string lines_of(const Engine& engine, const Actions& actions) {
-  const RecordLines lines(engine.descriptions(), {MatricesPolicy::When::every, 1});
+  const RecordLines lines(engine.descriptions(), {MatricesPolicy::Kind::every, 1});
   std::string out;
   for (const Record& record : actions.records) lines.append(record, out);
   return out;
@@ -151,17 +151,20 @@ struct BadSample {
 TEST(Engine, RefusalsLeaveNoTraceInAnyRecord) {
   // Reference: an engine that never saw the bad samples gives the same lines to the byte.
   const BadSample bad[] = {
-      {RefusalReason::wrong_count, {1, 2}, 0, "a sample has 2 values; one per channel: 3"},
-      {RefusalReason::wrong_count, {}, 0, "a sample has 0 values"},
-      {RefusalReason::not_finite, {1, -kInfinity, 3}, 0, "channel rate: the value is infinite"},
-      {RefusalReason::missing, {kNaN, 2, 3}, 0, "channel price: the value is missing"},
-      {RefusalReason::time_backwards, {1, 2, 3}, -5000, "time "},
-      {RefusalReason::not_positive, {0, 2, 3}, 0, "channel price: the level 0 has no logarithm"},
-      {RefusalReason::not_positive, {-4, 2, 3}, 0, "channel price: the level -4 has no log"},
-      {RefusalReason::out_of_range, {1, 1e151, 3}, 0, "channel rate: the value 1e+151 or its"},
-      {RefusalReason::out_of_range, {1, 1e-151, 3}, 0, "channel rate: the value 1e-151 or its"},
-      {RefusalReason::out_of_range, {1e-300, 2, 3}, 0, "channel price: the value 1e-300 or"},
-      {RefusalReason::out_of_range, {1, 2, 1e149}, 0, "channel spread: the value 1e+149 or its"},
+      {RefusalReason::wrong_count,
+       {1, 2},
+       0,
+       "sample: has 2 values; one for each of the 3 channels"},
+      {RefusalReason::wrong_count, {}, 0, "sample: has 0 values"},
+      {RefusalReason::not_finite, {1, -kInfinity, 3}, 0, "rate: the value is infinite"},
+      {RefusalReason::missing, {kNaN, 2, 3}, 0, "price: the value is missing"},
+      {RefusalReason::time_backwards, {1, 2, 3}, -5000, "time: "},
+      {RefusalReason::not_positive, {0, 2, 3}, 0, "price: level 0 has no logarithm"},
+      {RefusalReason::not_positive, {-4, 2, 3}, 0, "price: level -4 has no log"},
+      {RefusalReason::out_of_range, {1, 1e151, 3}, 0, "rate: the value 1e+151 is out of range"},
+      {RefusalReason::out_of_range, {1, 1e-151, 3}, 0, "rate: the value 1e-151 is out of range"},
+      {RefusalReason::out_of_range, {1e-300, 2, 3}, 0, "price: the value 1e-300 is out of range"},
+      {RefusalReason::out_of_range, {1, 2, 1e149}, 0, "spread: the change 1e+151 is out of range"},
   };
   Engine engine(settings()), untouched(settings());
   Actions actions, refused, want;
@@ -213,9 +216,9 @@ TEST(Engine, AcknowledgesDuplicatesAgainAndSendsGapsBack) {
     sample.sender_sequence = next + 2;
     engine.step(sample, actions);
     EXPECT_EQ(actions.refusal.reason, RefusalReason::sequence_gap);
-    EXPECT_EQ(actions.refusal.fault.line(), "sample " + std::to_string(next + 2) +
-                                                " of sender desk-1 came too early; send " +
-                                                std::to_string(next) + " next");
+    EXPECT_EQ(actions.refusal.fault.line(), "sender desk-1: sample " + std::to_string(next + 2) +
+                                                " came before " + std::to_string(next) +
+                                                "; samples from " + std::to_string(next) + " on");
     sample.sender_sequence = next;
     engine.step(sample, actions);
     ASSERT_TRUE(actions.accepted && !actions.duplicate);
@@ -229,19 +232,21 @@ TEST(Engine, AcknowledgesDuplicatesAgainAndSendsGapsBack) {
   EXPECT_EQ(engine.sequence(), 60U);
 }
 
-TEST(Engine, ARefusedSampleDoesNotUseUpItsSequence) {
+TEST(Engine, ARefusedSampleUsesUpItsSequenceSoThatTheSenderCanGoOn) {
   Engine engine(settings());
   Actions actions;
   engine.step({"a", 1, 0, {1, kNaN, 1}}, actions);
   EXPECT_EQ(actions.refusal.reason, RefusalReason::missing);
-  EXPECT_EQ(engine.next_of("a"), 1U);
-  engine.step({"a", 1, 0, {1, 1, 1}}, actions);
+  EXPECT_EQ(engine.next_of("a"), 2U);
+  EXPECT_EQ(engine.sequence(), 0U);
+  engine.step({"a", 2, 0, {1, 1, 1}}, actions);
   EXPECT_TRUE(actions.accepted && !actions.duplicate);
+  EXPECT_EQ(engine.sequence(), 1U);
 }
 
 TEST(Engine, MatricesCanBeLeftOutAndAskedFor) {
   Engine engine(settings()), whole(settings());
-  engine.set_matrices(false);
+  engine.set_matrices({MatricesPolicy::Kind::never, 1});
   Actions actions, want;
   for (const SampleEvent& sample : feed(80)) {
     engine.step(sample, actions);

@@ -46,15 +46,15 @@ EstimateRecord estimate() {
 
 const char* const kLiveLine =
     R"({"sequence":1234,"time":"2026-03-01T09:30:00.250000000Z","panel":"metals","horizon":"fast",)"
-    R"("state":"live","state_reason":"none","channels":["copper","tin"],"channels_version":1,)"
+    R"("state":"live","state_reason":"none","channels":2,"channels_version":1,)"
     R"("nu":4.25,"nu_low":3.5,"nu_high":5.0625,"nu_status":"estimated","nu_fit":4.25,)"
     R"("centre":[0,-0],"scatter":[1.5,-0.1,1e+300],"covariance_factor":1.8888888888888888,)"
     R"("samples_effective":250,"log_volatility":-4.5,"residual":1e-11,"iterations":2,)"
-    R"("since_polish":17,"distance":3.5,"p_value":0.1,"coverage":1,"condition":12.5})"
+    R"("since_polish":17,"distance":3.5,"p_value":0.1,"coverage":1,"condition":12.5,"flagged":false})"
     "\n";
 
 std::string line_of(const Record& record,
-                    MatricesPolicy policy = {MatricesPolicy::When::every, 1}) {
+                    MatricesPolicy policy = {MatricesPolicy::Kind::every, 1}) {
   const RecordLines lines(descriptions(), policy);
   EXPECT_TRUE(lines.knows(record));
   std::string out;
@@ -74,11 +74,11 @@ TEST(RecordLines, WarmingEstimateHasTheseBytes) {
   EXPECT_EQ(
       line_of(record),
       R"({"sequence":1,"time":"1970-01-01T00:00:00.000000000Z","panel":"one","horizon":"h",)"
-      R"("state":"warming","state_reason":"too_few_samples","channels":["a.b"],)"
+      R"("state":"warming","state_reason":"too_few_samples","channels":1,)"
       R"("channels_version":3,"nu":null,"nu_low":null,"nu_high":null,"nu_status":"not_identified",)"
       R"("nu_fit":null,"centre":null,"scatter":null,"covariance_factor":null,)"
       R"("samples_effective":1,"log_volatility":null,"residual":null,"iterations":0,)"
-      R"("since_polish":0,"distance":null,"p_value":null,"coverage":1,"condition":null})"
+      R"("since_polish":0,"distance":null,"p_value":null,"coverage":1,"condition":null,"flagged":false})"
       "\n");
 }
 
@@ -95,10 +95,10 @@ TEST(RecordLines, FlagHasTheseBytes) {
   EXPECT_EQ(
       line_of(record),
       R"({"sequence":9,"time":"1969-12-31T23:59:59.999999999Z","panel":"metals","horizon":"slow",)"
-      R"("distance":51.5,"p_value":2.5e-05,"severity":"severe","channels":[{"name":"tin",)"
+      R"("distance":51.5,"p_value":2.5e-05,"severity":"severe","flagged":3,)"
+      R"("flagged_expected":0.75,"channels":[{"name":"tin",)"
       R"("value":-0.25,"residual":-7.5,"share":51.25,"p_value":4.5e-05},{"name":"copper",)"
-      R"("value":0.5,"residual":null,"share":0.25,"p_value":0.75}],"flagged":3,)"
-      R"("flagged_expected":0.75})"
+      R"("value":0.5,"residual":null,"share":0.25,"p_value":0.75}]})"
       "\n");
 }
 
@@ -107,15 +107,17 @@ TEST(RecordLines, MatricesFollowThePolicy) {
   const auto has_matrices = [&record](MatricesPolicy policy) {
     return line_of(record, policy).find("\"scatter\":[") != std::string::npos;
   };
-  EXPECT_TRUE(has_matrices({MatricesPolicy::When::every, 2}));
+  EXPECT_TRUE(has_matrices({MatricesPolicy::Kind::every, 2}));
   record.sequence = 1235;
-  EXPECT_FALSE(has_matrices({MatricesPolicy::When::every, 2}));
-  EXPECT_FALSE(has_matrices({MatricesPolicy::When::at_alerts, 1}));
-  EXPECT_FALSE(has_matrices({MatricesPolicy::When::never, 1}));
+  EXPECT_FALSE(has_matrices({MatricesPolicy::Kind::every, 2}));
+  EXPECT_FALSE(has_matrices({MatricesPolicy::Kind::flagged, 1}));
+  EXPECT_FALSE(has_matrices({MatricesPolicy::Kind::never, 1}));
+  record.flagged = true;
+  EXPECT_TRUE(has_matrices({MatricesPolicy::Kind::flagged, 1}));
   EXPECT_EQ(parse_matrices_policy("every").value().every, 1U);
   EXPECT_EQ(parse_matrices_policy("250").value().every, 250U);
-  EXPECT_EQ(parse_matrices_policy("alerts").value().when, MatricesPolicy::When::at_alerts);
-  EXPECT_EQ(parse_matrices_policy("never").value().when, MatricesPolicy::When::never);
+  EXPECT_EQ(parse_matrices_policy("flagged").value().kind, MatricesPolicy::Kind::flagged);
+  EXPECT_EQ(parse_matrices_policy("never").value().kind, MatricesPolicy::Kind::never);
   for (const char* bad : {"", "0", "-1", "all", "12x", "99999999999999999999999"}) {
     EXPECT_FALSE(parse_matrices_policy(bad).ok()) << bad;
   }

@@ -135,8 +135,8 @@ TEST_F(ReplayProgram, EndsAtTheFirstRefusedSampleOrCountsThem) {
   const Outcome ended = replay("", "bad.csv");
   EXPECT_EQ(ended.code, 65);
   EXPECT_EQ(ended.output, at("bad.csv") +
-                              ":3: channel a: the value is missing; this version needs every "
-                              "channel in every sample (or add --keep-going)\n");
+                              ":3: a: the value is missing; a finite number (this version does "
+                              "not take missing values) (or add --keep-going)\n");
   EXPECT_EQ(estimates().size(), 2U) << "what came before stays";
   const Outcome counted = replay("--keep-going --overwrite", "bad.csv");
   EXPECT_EQ(counted.code, 0);

@@ -75,7 +75,7 @@ TEST(Settings, ReadsEveryKeyOfTheExample) {
   EXPECT_EQ(panel.horizons[1].tolerance, 1e-10);
   EXPECT_EQ(panel.flags.rate, 0.001);
   EXPECT_EQ(panel.flags.severe_rate, 0.0001);
-  EXPECT_EQ(settings.panels[0].alerts->mean_samples_between_false, 5000);
+  EXPECT_EQ(settings.panels[0].alerts.mean_samples_between_false, 5000);
   EXPECT_EQ(settings.publish_address, "tcp://127.0.0.1:7702");
   EXPECT_EQ(settings.control_address, "tcp://127.0.0.1:7703");
   EXPECT_EQ(settings.store_directory, "state");
@@ -93,6 +93,7 @@ TEST(Settings, ReadsMemoriesInSamplesAndInTime) {
       {"window: 250ms", Memory::Kind::window_time, 0.25},
       {"window: 90s", Memory::Kind::window_time, 90},
       {"window: 15min", Memory::Kind::window_time, 900},
+      {"window: 15m", Memory::Kind::window_time, 900},
       {"window: 6h", Memory::Kind::window_time, 21600},
       {"window: \"2d\"", Memory::Kind::window_time, 172800},
       {"window: 5e2", Memory::Kind::window_samples, 500},
@@ -219,8 +220,8 @@ const BadCase kBadCases[] = {
     {"scale: 0.0001", "scale: \"2\"", "s.yaml:6:53: scale is a text in quotes; write 2 without"},
     {"scale: 0.0001", "scale: .inf", "s.yaml:6:53: scale is \".inf\"; write a finite number"},
     {"scale: 0.0001", "scale: 1e999", "s.yaml:6:53: scale is \"1e999\"; write a finite number"},
-    {"- {name: tin, enters_as: change, unit: bp, scale: 0.0001}", "- tin",
-     "s.yaml:6:5: a channel is \"tin\"; write a map with the keys name"},
+    {"- {name: tin, enters_as: change, unit: bp, scale: 0.0001}", "- [tin]",
+     "s.yaml:6:5: a channel is a list; write a map with the keys name"},
     // Panels.
     {"[copper, tin]", "[copper, tinn]", "s.yaml:9:24: unknown channel \"tinn\"; did you mean tin?"},
     {"[copper, tin]", "[copper, uranium]",
@@ -266,7 +267,7 @@ const BadCase kBadCases[] = {
     {"window: 500", "window: 0", "s.yaml:14:30: window is 0; write a length above 0"},
     {"window: 500", "window: 10.5", "s.yaml:14:30: window is \"10.5\"; write a whole number"},
     {"window: 500", "window: 5 weeks", "s.yaml:14:30: window is \"5 weeks\"; write a whole number"},
-    {"window: 500", "window: 15m", "s.yaml:14:30: window is \"15m\"; write a whole number"},
+    {"window: 500", "window: 15 m", "s.yaml:14:30: window is \"15 m\"; write a whole number"},
     {"window: 500", "window: -6h", "s.yaml:14:30: window is -6h; write a length above 0"},
     {"window: 500", "window: 1e15", "s.yaml:14:30: window is 1e15; at most 10000000 samples"},
     {"half_life: 60", "half_life: -60", "s.yaml:15:33: half_life is -60; write a length above 0"},

@@ -1,4 +1,4 @@
-#include "service/assemble/time_text.h"
+#include "service/intake/time_text.h"
 
 #include <charconv>
 #include <chrono>
@@ -68,7 +68,7 @@ Result<std::int64_t> parse_fraction_and_zone(std::string_view rest) {
 
 }  // namespace
 
-Result<std::int64_t> parse_time(std::string_view text) {
+Result<std::int64_t> read_time(std::string_view text) {
   if (is_integer(text)) {
     std::int64_t value = 0;
     if (std::from_chars(text.data(), text.data() + text.size(), value).ec != std::errc()) {
@@ -92,7 +92,15 @@ Result<std::int64_t> parse_time(std::string_view text) {
   return date.value() + ((hour * 60 + minute) * 60 + second) * kSecond + rest.value();
 }
 
-void format_time(std::int64_t time_ns, char* out) {
+std::optional<std::int64_t> parse_time(std::string_view text) {
+  const Result<std::int64_t> time = read_time(text);
+  return time ? std::optional<std::int64_t>(time.value()) : std::nullopt;
+}
+
+void append_time(std::string& text, std::int64_t time_ns) {
+  constexpr std::size_t kLength = 30;
+  text.resize(text.size() + kLength);
+  char* out = text.data() + text.size() - kLength;
   std::int64_t day = time_ns / kDay, rest = time_ns % kDay;
   if (rest < 0) {
     rest += kDay;
@@ -120,9 +128,9 @@ void format_time(std::int64_t time_ns, char* out) {
   *out++ = 'Z';
 }
 
-std::string time_text(std::int64_t time_ns) {
-  std::string text(kTimeTextLength, ' ');
-  format_time(time_ns, text.data());
+std::string format_time(std::int64_t time_ns) {
+  std::string text;
+  append_time(text, time_ns);
   return text;
 }
 

@@ -7,6 +7,7 @@
 #pragma once
 
 #include <cstdint>
+#include <optional>
 #include <string>
 #include <string_view>
 
@@ -17,12 +18,13 @@ namespace tailweir {
 // Reads "2026-03-01T09:30:00.25Z" (or a blank for the T, or an offset such as +02:00), a bare date
 // (midnight UTC), or an integer count of nanoseconds. The Fault names what is wrong with the text;
 // its `where` is empty.
-Result<std::int64_t> parse_time(std::string_view text);
+Result<std::int64_t> read_time(std::string_view text);
+// The same without the reason.
+std::optional<std::int64_t> parse_time(std::string_view text);
 
 // "2026-03-01T09:30:00.250000000Z": always UTC, always nine digits, so that lines sort as text.
-// Writes exactly kTimeTextLength characters, no terminator; any time_ns.
-constexpr int kTimeTextLength = 30;
-void format_time(std::int64_t time_ns, char* out);
-std::string time_text(std::int64_t time_ns);
+// Any time_ns.
+std::string format_time(std::int64_t time_ns);
+void append_time(std::string& text, std::int64_t time_ns);
 
 }  // namespace tailweir
