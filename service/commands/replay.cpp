@@ -1,15 +1,17 @@
-// tailweir replay SETTINGS --from RECORDING --into DIR: the daemon's engine over a recording, as
-// fast as it goes. Writes estimates.jsonl, flags.jsonl and report.txt.
-#include <CLI/CLI.hpp>
+// tailweir replay: the daemon's engine over a recording, as fast as it goes. Writes
+// estimates.jsonl, flags.jsonl, last.jsonl (the last estimates, with their matrices) and
+// report.txt.
+
+#include <algorithm>
 #include <cerrno>
 #include <cstdio>
 #include <cstring>
 #include <filesystem>
-#include <memory>
+#include <optional>
 #include <system_error>
 
 #include "service/commands/commands.h"
-#include "service/commands/progress.h"
+#include "service/commands/terminal.h"
 #include "service/engine/engine.h"
 #include "service/intake/recording.h"
 #include "service/report/record_lines.h"
@@ -17,11 +19,6 @@
 
 namespace tailweir {
 namespace {
-
-struct ReplayOptions {
-  std::string settings, from, into, matrices = "flagged";
-  bool overwrite = false, keep_going = false;
-};
 
 // A file that is written in large pieces; the first error sticks.
 class OutputFile {
@@ -57,9 +54,9 @@ class OutputFile {
     file_ = nullptr;
     return error_ == 0;
   }
-  std::string complaint() const {
-    return path_ + ": cannot be written: " + std::strerror(error_) +
-           "; name a folder with room and the right to write";
+  Fault fault() const {
+    return {path_, std::string("cannot be written: ") + std::strerror(error_),
+            "name a folder with room and the right to write"};
   }
 
  private:
@@ -68,26 +65,19 @@ class OutputFile {
   int error_ = 0;
 };
 
-int complain(int code, const std::string& line) {
-  std::fprintf(stderr, "%s\n", line.c_str());
-  return code;
-}
-
-// The folder exists and may be written into; otherwise the line that says why not.
-std::string prepare_folder(const std::string& into, bool overwrite) {
+// Makes the folder and looks whether it may be written into.
+std::optional<Fault> prepare_folder(const std::string& into, bool overwrite) {
   namespace fs = std::filesystem;
   std::error_code error;
   fs::create_directories(into, error);
   if (error || !fs::is_directory(into, error)) {
-    return into + ": cannot be made a folder" + (error ? ": " + error.message() : "") +
-           "; name another with --into";
+    return Fault{into, "cannot be made a folder" + (error ? ": " + error.message() : ""),
+                 "name another with --into"};
   }
   const bool empty = fs::is_empty(into, error);
-  if (error) return into + ": cannot be read: " + error.message() + "; name another with --into";
-  if (!empty && !overwrite) {
-    return into + ": is not empty; name another folder, or add --overwrite";
-  }
-  return "";
+  if (error) return Fault{into, "cannot be read: " + error.message(), "name another with --into"};
+  if (empty || overwrite) return std::nullopt;
+  return Fault{into, "is not empty", "name another folder, or add --overwrite"};
 }
 
 class Replay {
@@ -95,47 +85,37 @@ class Replay {
   Replay(Settings settings, RecordingReader reader, MatricesPolicy policy)
       : engine_(std::move(settings)),
         reader_(std::move(reader)),
-        policy_(policy),
         lines_(engine_.descriptions(), policy),
         summary_(engine_.settings(), engine_.descriptions()) {
     engine_.set_matrices(policy);
   }
 
-  // Finds the column of every channel. False, with the line, when one is not there.
-  bool match_columns(std::string& complaint);
+  // Finds the column of every channel.
+  std::optional<Fault> match_columns();
   int run(const ReplayOptions& options);
 
  private:
   int play(bool keep_going);
   bool take(const Actions& actions);
-  void finish_lines();
 
   Engine engine_;
   RecordingReader reader_;
-  MatricesPolicy policy_;
   RecordLines lines_;
   RunSummary summary_;
   RunSummary::Run about_;
   std::vector<std::size_t> columns_;  // of each channel of the settings
   Actions actions_;
-  struct Written {
-    std::uint32_t panel, horizon;
-    bool flagged;
-  };
-  std::vector<Written> last_;  // estimate lines of the last sample
-  std::size_t last_from_ = 0;  // where they start
-  OutputFile estimates_, flags_, report_;
+  OutputFile estimates_, flags_, last_, report_;
 };
 
-bool Replay::match_columns(std::string& complaint) {
+std::optional<Fault> Replay::match_columns() {
   const std::vector<std::string>& names = reader_.channels();
   std::vector<bool> used(names.size());
   for (const ChannelSettings& channel : engine_.settings().channels) {
     const auto found = std::find(names.begin(), names.end(), channel.name);
     if (found == names.end()) {
-      complaint = reader_.place(1) + ": has no column " + channel.name +
-                  "; the settings name it as a channel";
-      return false;
+      return Fault{reader_.place(1), "has no column " + channel.name,
+                   "the settings name it as a channel"};
     }
     columns_.push_back(static_cast<std::size_t>(found - names.begin()));
     used[columns_.back()] = true;
@@ -143,47 +123,28 @@ bool Replay::match_columns(std::string& complaint) {
   for (std::size_t i = 0; i < names.size(); ++i) {
     if (!used[i]) about_.unused_columns.push_back(names[i]);
   }
-  return true;
+  return std::nullopt;
 }
 
-// Writes what one accepted sample gave. The last sample's lines stay in the buffer, because at the
-// end they get their matrices.
+// Writes what one accepted sample gave.
 bool Replay::take(const Actions& actions) {
-  const bool good = estimates_.flush(false) && flags_.flush(false);
-  last_.clear();
-  last_from_ = estimates_.text.size();
   for (const Record& record : actions.records) {
     summary_.add(record);
-    if (const auto* estimate = std::get_if<EstimateRecord>(&record)) {
-      lines_.append(record, estimates_.text);
-      last_.push_back({estimate->panel, estimate->horizon, estimate->flagged});
-    } else {
-      lines_.append(record, flags_.text);
-    }
+    const bool flag = std::holds_alternative<FlagRecord>(record);
+    lines_.append(record, flag ? flags_.text : estimates_.text);
   }
-  return good;
-}
-
-void Replay::finish_lines() {
-  if (policy_.kind == MatricesPolicy::Kind::never) return;
-  estimates_.text.resize(last_from_);
-  for (const auto& [panel, horizon, flagged] : last_) {
-    EstimateRecord record = engine_.latest(panel, horizon);
-    record.flagged = flagged;
-    lines_.append(record, true, estimates_.text);
-  }
+  return estimates_.flush(false) && flags_.flush(false);
 }
 
 int Replay::play(bool keep_going) {
-  ProgressBar bar("replay", reader_.size());
+  Progress bar("replay");
   SampleEvent event;
   event.values.resize(columns_.size());
   for (;;) {
     Result<std::optional<RecordedSample>> sample = reader_.next();
     if (!sample) {
-      bar.wipe();
       about_.ended_early = sample.fault().line();
-      return complain(reader_.unreadable() ? kIoError : kBadData, about_.ended_early);
+      return reader_.unreadable() ? kIoError : kBadData;
     }
     if (!sample.value()) return kOk;
     event.time_ns = sample.value()->time_ns;
@@ -192,79 +153,68 @@ int Replay::play(bool keep_going) {
     }
     engine_.step(event, actions_);
     if (!actions_.accepted && !keep_going) {
-      bar.wipe();
       Fault fault = actions_.refusal.fault;
       fault.where = reader_.place(sample.value()->line) + ": " + fault.where;
       about_.ended_early = fault.line();
-      return complain(kBadData, about_.ended_early + " (or add --keep-going)");
+      about_.ended_early += " (or add --keep-going)";
+      return kBadData;
     }
     if (actions_.accepted && !take(actions_)) return kIoError;
-    bar.show(reader_.position(), engine_.sequence());
+    if (engine_.sequence() % 64 == 0) {
+      bar.show(reader_.position(), reader_.size(), std::to_string(engine_.sequence()) + " samples");
+    }
   }
 }
 
 int Replay::run(const ReplayOptions& options) {
-  const std::filesystem::path into = options.into;
-  const std::pair<OutputFile*, const char*> files[] = {
-      {&estimates_, "estimates.jsonl"}, {&flags_, "flags.jsonl"}, {&report_, "report.txt"}};
+  const std::filesystem::path into = options.directory;
+  const std::pair<OutputFile*, const char*> files[] = {{&estimates_, "estimates.jsonl"},
+                                                       {&flags_, "flags.jsonl"},
+                                                       {&last_, "last.jsonl"},
+                                                       {&report_, "report.txt"}};
   for (const auto& [file, name] : files) {
-    if (!file->open(into / name)) return complain(kIoError, file->complaint());
+    if (!file->open(into / name)) return complain(file->fault(), kIoError);
   }
   about_.settings = options.settings;
-  about_.recording = options.from == "-" ? "standard input" : options.from;
+  about_.recording = reader_.name();
   const int code = play(options.keep_going);
-  finish_lines();
+  for (std::uint32_t panel = 0; panel < engine_.descriptions().size(); ++panel) {
+    for (std::uint32_t h = 0; h < engine_.descriptions()[panel].horizons.size(); ++h) {
+      lines_.append(engine_.latest(panel, h), true, last_.text);
+    }
+  }
   report_.text = summary_.text(about_, engine_.counters());
-  const std::string text = report_.text;
   for (const auto& [file, name] : files) {
-    if (!file->close()) return complain(kIoError, file->complaint());
+    if (!file->close()) return complain(file->fault(), kIoError);
   }
-  if (code == kOk && (std::fwrite(text.data(), 1, text.size(), stdout) != text.size() ||
-                      std::fflush(stdout) != 0)) {
-    return complain(kIoError, "standard output: cannot be written; the files are complete");
-  }
-  return code;
-}
-
-int replay(const ReplayOptions& options) {
-  const Result<MatricesPolicy> policy = parse_matrices_policy(options.matrices);
-  if (!policy) return complain(kUsage, policy.fault().line());
-  Result<Settings> settings = load_settings(options.settings);
-  if (!settings) return complain(kBadSettings, settings.fault().line());
-  for (const std::string& key : not_used(settings.value())) {
-    std::fprintf(stderr, "%s: %s is not used by this version\n", options.settings.c_str(),
-                 key.c_str());
-  }
-  bool unreadable = false;
-  Result<RecordingReader> reader = RecordingReader::open(options.from, &unreadable);
-  if (!reader) return complain(unreadable ? kIoError : kBadData, reader.fault().line());
-  Replay player(std::move(settings.value()), std::move(reader.value()), policy.value());
-  std::string complaint;
-  if (!player.match_columns(complaint)) return complain(kBadData, complaint);
-  complaint = prepare_folder(options.into, options.overwrite);
-  if (!complaint.empty()) return complain(kIoError, complaint);
-  return player.run(options);
+  if (code != kOk) return complain({"", about_.ended_early, ""}, code);
+  std::printf("%llu samples replayed, %llu refused; records and report.txt in %s\n",
+              static_cast<unsigned long long>(engine_.counters().accepted),
+              static_cast<unsigned long long>(engine_.counters().refused),
+              options.directory.c_str());
+  return kOk;
 }
 
 }  // namespace
 
-void add_replay_command(CLI::App& program, int& exit_code) {
-  CLI::App* command = program.add_subcommand(
-      "replay", "Runs settings over a recording as fast as it goes, and writes what they give.");
-  const auto options = std::make_shared<ReplayOptions>();
-  command->add_option("SETTINGS", options->settings, "settings file (YAML)")->required();
-  command->add_option("--from", options->from, "recording (CSV), - for standard input")->required();
-  command->add_option("--into", options->into, "folder for the files; made when absent")
-      ->required();
-  command
-      ->add_option("--matrices", options->matrices,
-                   "estimate lines with centre and scatter: every, a number N for every N-th "
-                   "sample, flagged (and the last sample), never")
-      ->capture_default_str();
-  command->add_flag("--overwrite", options->overwrite, "write into a folder that is not empty");
-  command->add_flag("--keep-going", options->keep_going,
-                    "count samples that are refused instead of ending at the first");
-  command->callback([options, &exit_code] { exit_code = replay(*options); });
+int run_replay(const ReplayOptions& options) {
+  const Result<MatricesPolicy> policy = parse_matrices_policy(options.matrices);
+  if (!policy) return complain(policy.fault(), kUsage);
+  Result<Settings> settings = load_settings(options.settings);
+  if (!settings) return complain(settings.fault(), kBadSettings);
+  for (const std::string& key : not_used(settings.value())) {
+    std::fprintf(stderr, "tailweir: %s: %s is not used by this version\n", options.settings.c_str(),
+                 key.c_str());
+  }
+  bool unreadable = false;
+  Result<RecordingReader> reader = RecordingReader::open(options.recording, &unreadable);
+  if (!reader) return complain(reader.fault(), unreadable ? kIoError : kBadData);
+  Replay player(std::move(settings.value()), std::move(reader.value()), policy.value());
+  if (const std::optional<Fault> fault = player.match_columns()) return complain(*fault, kBadData);
+  if (const std::optional<Fault> fault = prepare_folder(options.directory, options.overwrite)) {
+    return complain(*fault, kIoError);
+  }
+  return player.run(options);
 }
 
 }  // namespace tailweir
