@@ -1,255 +1,220 @@
-// tailweir replay: the same engine over a recording, as fast as it goes.
+// tailweir replay: the daemon's engine over a recording, as fast as it goes. Writes
+// estimates.jsonl, flags.jsonl, last.jsonl (the last estimates, with their matrices) and
+// report.txt.
 
 #include <algorithm>
-#include <cmath>
+#include <cerrno>
 #include <cstdio>
+#include <cstring>
 #include <filesystem>
-#include <fstream>
-#include <memory>
+#include <optional>
+#include <system_error>
 
 #include "service/commands/commands.h"
 #include "service/commands/terminal.h"
 #include "service/engine/engine.h"
 #include "service/intake/recording.h"
-#include "service/intake/time_text.h"
 #include "service/report/record_lines.h"
+#include "service/report/summary.h"
 
 namespace tailweir {
 namespace {
 
-namespace fs = std::filesystem;
+// A file that is written in large pieces; the first error sticks.
+class OutputFile {
+ public:
+  bool open(const std::filesystem::path& path) {
+    path_ = path.string();
+    file_ = std::fopen(path_.c_str(), "wb");
+    if (file_ == nullptr) error_ = errno;
+    return file_ != nullptr;
+  }
+  ~OutputFile() { close(); }
+  OutputFile() = default;
+  OutputFile(const OutputFile&) = delete;
+  OutputFile& operator=(const OutputFile&) = delete;
 
-// What the report says of one horizon.
-struct Tally {
-  std::uint64_t flags = 0, severe = 0, scored = 0, live = 0;
-  EstimateRecord last;
-  double nu_least = INFINITY, nu_most = -INFINITY;
+  // Lines are appended to this text, and leave it by flush().
+  std::string text;
+
+  // Writes the text out when it is large, or always.
+  bool flush(bool always) {
+    constexpr std::size_t kLarge = std::size_t{1} << 20;
+    if (text.size() < kLarge && !always) return true;
+    if (std::fwrite(text.data(), 1, text.size(), file_) != text.size() && error_ == 0) {
+      error_ = errno;
+    }
+    text.clear();
+    return error_ == 0;
+  }
+  bool close() {
+    if (file_ == nullptr) return error_ == 0;
+    flush(true);
+    if (std::fclose(file_) != 0 && error_ == 0) error_ = errno;
+    file_ = nullptr;
+    return error_ == 0;
+  }
+  Fault fault() const {
+    return {path_, std::string("cannot be written: ") + std::strerror(error_),
+            "name a folder with room and the right to write"};
+  }
+
+ private:
+  std::string path_;
+  std::FILE* file_ = nullptr;
+  int error_ = 0;
 };
 
-struct Worst {
-  FlagRecord record;
-};
-
-Result<MatricesPolicy> matrices_policy(const std::string& word) {
-  MatricesPolicy policy;
-  if (word == "every") return policy;
-  if (word == "never") {
-    policy.kind = MatricesPolicy::Kind::never;
-    return policy;
+// Makes the folder and looks whether it may be written into.
+std::optional<Fault> prepare_folder(const std::string& into, bool overwrite) {
+  namespace fs = std::filesystem;
+  std::error_code error;
+  fs::create_directories(into, error);
+  if (error || !fs::is_directory(into, error)) {
+    return Fault{into, "cannot be made a folder" + (error ? ": " + error.message() : ""),
+                 "name another with --into"};
   }
-  if (word == "flagged" || word == "alerts") {
-    policy.kind = MatricesPolicy::Kind::flagged;
-    return policy;
-  }
-  if (!word.empty() && word.size() < 10 &&
-      std::all_of(word.begin(), word.end(), [](char c) { return c >= '0' && c <= '9'; }) &&
-      std::stoull(word) > 0) {
-    policy.every = std::stoull(word);
-    return policy;
-  }
-  return Fault{"--matrices", "'" + word + "' is unknown", "every, a number N, flagged or never"};
+  const bool empty = fs::is_empty(into, error);
+  if (error) return Fault{into, "cannot be read: " + error.message(), "name another with --into"};
+  if (empty || overwrite) return std::nullopt;
+  return Fault{into, "is not empty", "name another folder, or add --overwrite"};
 }
 
 class Replay {
  public:
-  Replay(Settings settings, MatricesPolicy matrices, fs::path directory)
+  Replay(Settings settings, RecordingReader reader, MatricesPolicy policy)
       : engine_(std::move(settings)),
-        lines_(engine_.descriptions(), matrices),
-        directory_(std::move(directory)),
-        estimates_(directory_ / "estimates.jsonl", std::ios::binary),
-        flags_(directory_ / "flags.jsonl", std::ios::binary) {
-    engine_.set_matrices(matrices);
-    for (const PanelDescription& panel : engine_.descriptions()) {
-      tallies_.emplace_back(panel.horizons.size());
-    }
+        reader_(std::move(reader)),
+        lines_(engine_.descriptions(), policy),
+        summary_(engine_.settings(), engine_.descriptions()) {
+    engine_.set_matrices(policy);
   }
 
-  bool writable() const { return estimates_.good() && flags_.good(); }
-  Engine& engine() { return engine_; }
-
-  // Takes one sample; the refusal says why not.
-  const Refusal& take(const SampleEvent& event) {
-    engine_.step(event, actions_);
-    for (const Record& record : actions_.records) {
-      if (const EstimateRecord* estimate = std::get_if<EstimateRecord>(&record)) {
-        note(*estimate);
-        estimates_ << lines_.line(record) << '\n';
-      } else {
-        note(*std::get_if<FlagRecord>(&record));
-        flags_ << lines_.line(record) << '\n';
-      }
-    }
-    return actions_.refusal;
-  }
-
-  bool finish() {
-    RecordLines whole(engine_.descriptions(), {});
-    std::ofstream last(directory_ / "last.jsonl", std::ios::binary);
-    for (std::uint32_t k = 0; k < tallies_.size(); ++k) {
-      for (std::uint32_t h = 0; h < tallies_[k].size(); ++h) {
-        last << whole.line(engine_.latest(k, h)) << '\n';
-      }
-    }
-    std::ofstream report(directory_ / "report.txt", std::ios::binary);
-    write_report(report);
-    for (std::ofstream* file : {&estimates_, &flags_, &last, &report}) {
-      file->flush();
-      if (!file->good()) return false;
-    }
-    return true;
-  }
+  // Finds the column of every channel.
+  std::optional<Fault> match_columns();
+  int run(const ReplayOptions& options);
 
  private:
-  void note(const EstimateRecord& record) {
-    Tally& tally = tallies_[record.panel][record.horizon];
-    tally.last.estimate = record.estimate;
-    tally.live += record.estimate.state == HorizonState::live;
-    tally.scored += !std::isnan(record.estimate.p_value);
-    if (record.estimate.state == HorizonState::live) {
-      tally.nu_least = std::min(tally.nu_least, record.estimate.nu);
-      tally.nu_most = std::max(tally.nu_most, record.estimate.nu);
-    }
-  }
-
-  void note(const FlagRecord& record) {
-    Tally& tally = tallies_[record.panel][record.horizon];
-    ++tally.flags;
-    tally.severe += record.flag.severity == Severity::severe;
-    worst_.push_back({record});
-    std::stable_sort(worst_.begin(), worst_.end(), [](const Worst& a, const Worst& b) {
-      return a.record.flag.p_value < b.record.flag.p_value;
-    });
-    if (worst_.size() > 10) worst_.resize(10);
-  }
-
-  void write_report(std::ostream& out) const {
-    const EngineCounters& counters = engine_.counters();
-    out << "samples accepted " << counters.accepted << ", refused " << counters.refused << "\n";
-    for (std::size_t k = 1; k < counters.refused_by_reason.size(); ++k) {
-      if (counters.refused_by_reason[k] > 0) {
-        out << "  " << name_of(static_cast<RefusalReason>(k)) << " "
-            << counters.refused_by_reason[k] << "\n";
-      }
-    }
-    for (std::size_t k = 0; k < tallies_.size(); ++k) {
-      const PanelDescription& panel = engine_.descriptions()[k];
-      const double rate = engine_.settings().panels[k].core.flags.rate;
-      for (std::size_t h = 0; h < tallies_[k].size(); ++h) {
-        const Tally& tally = tallies_[k][h];
-        const Estimate& e = tally.last.estimate;
-        out << "\n" << panel.name << "/" << panel.horizons[h] << ": " << name_of(e.state);
-        if (e.reason != StateReason::none) out << " (" << name_of(e.reason) << ")";
-        out << ", live for " << tally.live << " samples\n";
-        if (tally.live == 0) continue;
-        out << "  degrees of freedom now "
-            << nu_text(e.nu, e.nu_low, e.nu_high, name_of(e.nu_status)) << ", over the run "
-            << short_number(tally.nu_least) << " to " << short_number(tally.nu_most) << "\n"
-            << "  covariance = "
-            << (e.nu > 2 ? short_number(e.covariance_factor) + " x scatter"
-                         : std::string("not defined at nu <= 2"))
-            << "; residual " << short_number(e.residual) << "\n"
-            << "  flags " << tally.flags << " (expected "
-            << short_number(rate * static_cast<double>(tally.scored)) << " at rate "
-            << short_number(rate) << "), severe " << tally.severe << "\n";
-      }
-    }
-    if (!worst_.empty()) out << "\nleast likely samples\n";
-    for (const Worst& worst : worst_) {
-      const FlagRecord& record = worst.record;
-      const PanelDescription& panel = engine_.descriptions()[record.panel];
-      out << "  " << format_time(record.time_ns) << "  " << panel.name << "/"
-          << panel.horizons[record.horizon] << "  p " << short_number(record.flag.p_value);
-      if (!record.flag.channels.empty()) {
-        const ChannelBlame& first = record.flag.channels.front();
-        out << "  " << panel.channels[static_cast<std::size_t>(first.channel)] << " "
-            << short_number(first.residual) << " conditional units";
-      }
-      out << "\n";
-    }
-    out << "\nThese numbers come from a model. Keep independent limits before anything acts on "
-           "them.\n";
-  }
+  int play(bool keep_going);
+  bool take(const Actions& actions);
 
   Engine engine_;
+  RecordingReader reader_;
   RecordLines lines_;
-  fs::path directory_;
-  std::ofstream estimates_, flags_;
+  RunSummary summary_;
+  RunSummary::Run about_;
+  std::vector<std::size_t> columns_;  // of each channel of the settings
   Actions actions_;
-  std::vector<std::vector<Tally>> tallies_;
-  std::vector<Worst> worst_;
+  OutputFile estimates_, flags_, last_, report_;
 };
 
-// place[k]: column of the recording that holds the settings' channel k.
-Result<std::vector<std::size_t>> match(const Settings& settings, const RecordingReader& reader) {
-  std::vector<std::size_t> place;
-  for (const ChannelSettings& channel : settings.channels) {
-    const auto found = std::find(reader.channels().begin(), reader.channels().end(), channel.name);
-    if (found == reader.channels().end()) {
-      return Fault{reader.name(), "the recording has no channel '" + channel.name + "'",
-                   "a column for every channel of the settings"};
+std::optional<Fault> Replay::match_columns() {
+  const std::vector<std::string>& names = reader_.channels();
+  std::vector<bool> used(names.size());
+  for (const ChannelSettings& channel : engine_.settings().channels) {
+    const auto found = std::find(names.begin(), names.end(), channel.name);
+    if (found == names.end()) {
+      return Fault{reader_.place(1), "has no column " + channel.name,
+                   "the settings name it as a channel"};
     }
-    place.push_back(static_cast<std::size_t>(found - reader.channels().begin()));
+    columns_.push_back(static_cast<std::size_t>(found - names.begin()));
+    used[columns_.back()] = true;
   }
-  return place;
+  for (std::size_t i = 0; i < names.size(); ++i) {
+    if (!used[i]) about_.unused_columns.push_back(names[i]);
+  }
+  return std::nullopt;
 }
 
-std::optional<Fault> prepare(const ReplayOptions& options) {
-  std::error_code error;
-  fs::create_directories(options.directory, error);
-  if (error)
-    return Fault{options.directory, "cannot make this directory: " + error.message(), "--into DIR"};
-  if (!options.overwrite && !fs::is_empty(options.directory, error)) {
-    return Fault{options.directory, "the directory is not empty", "an empty one, or --overwrite"};
+// Writes what one accepted sample gave.
+bool Replay::take(const Actions& actions) {
+  for (const Record& record : actions.records) {
+    summary_.add(record);
+    const bool flag = std::holds_alternative<FlagRecord>(record);
+    lines_.append(record, flag ? flags_.text : estimates_.text);
   }
-  return {};
+  return estimates_.flush(false) && flags_.flush(false);
+}
+
+int Replay::play(bool keep_going) {
+  Progress bar("replay");
+  SampleEvent event;
+  event.values.resize(columns_.size());
+  for (;;) {
+    Result<std::optional<RecordedSample>> sample = reader_.next();
+    if (!sample) {
+      about_.ended_early = sample.fault().line();
+      return reader_.unreadable() ? kIoError : kBadData;
+    }
+    if (!sample.value()) return kOk;
+    event.time_ns = sample.value()->time_ns;
+    for (std::size_t i = 0; i < columns_.size(); ++i) {
+      event.values[i] = sample.value()->values[columns_[i]];
+    }
+    engine_.step(event, actions_);
+    if (!actions_.accepted && !keep_going) {
+      Fault fault = actions_.refusal.fault;
+      fault.where = reader_.place(sample.value()->line) + ": " + fault.where;
+      about_.ended_early = fault.line();
+      about_.ended_early += " (or add --keep-going)";
+      return kBadData;
+    }
+    if (actions_.accepted && !take(actions_)) return kIoError;
+    if (engine_.sequence() % 64 == 0) {
+      bar.show(reader_.position(), reader_.size(), std::to_string(engine_.sequence()) + " samples");
+    }
+  }
+}
+
+int Replay::run(const ReplayOptions& options) {
+  const std::filesystem::path into = options.directory;
+  const std::pair<OutputFile*, const char*> files[] = {{&estimates_, "estimates.jsonl"},
+                                                       {&flags_, "flags.jsonl"},
+                                                       {&last_, "last.jsonl"},
+                                                       {&report_, "report.txt"}};
+  for (const auto& [file, name] : files) {
+    if (!file->open(into / name)) return complain(file->fault(), kIoError);
+  }
+  about_.settings = options.settings;
+  about_.recording = reader_.name();
+  const int code = play(options.keep_going);
+  for (std::uint32_t panel = 0; panel < engine_.descriptions().size(); ++panel) {
+    for (std::uint32_t h = 0; h < engine_.descriptions()[panel].horizons.size(); ++h) {
+      lines_.append(engine_.latest(panel, h), true, last_.text);
+    }
+  }
+  report_.text = summary_.text(about_, engine_.counters());
+  for (const auto& [file, name] : files) {
+    if (!file->close()) return complain(file->fault(), kIoError);
+  }
+  if (code != kOk) return complain({"", about_.ended_early, ""}, code);
+  std::printf("%llu samples replayed, %llu refused; records and report.txt in %s\n",
+              static_cast<unsigned long long>(engine_.counters().accepted),
+              static_cast<unsigned long long>(engine_.counters().refused),
+              options.directory.c_str());
+  return kOk;
 }
 
 }  // namespace
 
 int run_replay(const ReplayOptions& options) {
+  const Result<MatricesPolicy> policy = parse_matrices_policy(options.matrices);
+  if (!policy) return complain(policy.fault(), kUsage);
   Result<Settings> settings = load_settings(options.settings);
   if (!settings) return complain(settings.fault(), kBadSettings);
-  Result<MatricesPolicy> policy = matrices_policy(options.matrices);
-  if (!policy) return complain(policy.fault(), kUsage);
-  Result<RecordingReader> reader = RecordingReader::open(options.recording);
-  if (!reader) return complain(reader.fault(), kBadData);
-  Result<std::vector<std::size_t>> place = match(settings.value(), reader.value());
-  if (!place) return complain(place.fault(), kBadData);
-  if (std::optional<Fault> fault = prepare(options)) return complain(*fault, kIoError);
-  Replay replay(settings.value(), policy.value(), options.directory);
-  if (!replay.writable()) {
-    return complain({options.directory, "cannot write here", "a writable directory"}, kIoError);
+  for (const std::string& key : not_used(settings.value())) {
+    std::fprintf(stderr, "tailweir: %s: %s is not used by this version\n", options.settings.c_str(),
+                 key.c_str());
   }
-  Progress progress("replay");
-  SampleEvent event;
-  event.values.resize(place.value().size());
-  for (std::uint64_t count = 0;; ++count) {
-    Result<std::optional<RecordedSample>> next = reader.value().next();
-    if (!next) return complain(next.fault(), kBadData);
-    if (!next.value()) break;
-    event.time_ns = next.value()->time_ns;
-    for (std::size_t k = 0; k < event.values.size(); ++k) {
-      event.values[k] = next.value()->values[place.value()[k]];
-    }
-    const Refusal& refusal = replay.take(event);
-    if (refusal.reason != RefusalReason::none && !options.keep_going) {
-      const Fault fault{options.recording + ":" + std::to_string(next.value()->line),
-                        refusal.fault.line(), "or --keep-going to count and go on"};
-      return complain(fault, kBadData);
-    }
-    if (count % 64 == 0) {
-      progress.show(reader.value().position(), reader.value().size(),
-                    std::to_string(count) + " samples");
-    }
+  bool unreadable = false;
+  Result<RecordingReader> reader = RecordingReader::open(options.recording, &unreadable);
+  if (!reader) return complain(reader.fault(), unreadable ? kIoError : kBadData);
+  Replay player(std::move(settings.value()), std::move(reader.value()), policy.value());
+  if (const std::optional<Fault> fault = player.match_columns()) return complain(*fault, kBadData);
+  if (const std::optional<Fault> fault = prepare_folder(options.directory, options.overwrite)) {
+    return complain(*fault, kIoError);
   }
-  if (!replay.finish()) {
-    return complain({options.directory, "writing failed", "room on the disk"}, kIoError);
-  }
-  const EngineCounters& counters = replay.engine().counters();
-  std::printf("%llu samples replayed, %llu refused; records and report.txt in %s\n",
-              static_cast<unsigned long long>(counters.accepted),
-              static_cast<unsigned long long>(counters.refused), options.directory.c_str());
-  return kOk;
+  return player.run(options);
 }
 
 }  // namespace tailweir
