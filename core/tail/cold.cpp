@@ -100,31 +100,47 @@ NuEstimate iterate(const Window& window, double nu, Step step, double tolerance,
   return estimate;
 }
 
-// Bound of the profile likelihood interval on one side of the maximum: refits at every trial.
-double profile_bound(const Window& window, double nu, double top, double direction) {
+// Bound of the 95% profile likelihood interval on one side (direction -1 or 1) of the maximum at
+// nu, where the mean log likelihood is top. r, the root of twice the likelihood drop, is nearly
+// linear in ln nu, so that regula falsi with the Illinois rule needs about six refits.
+double profile_bound(const Window& window, const NuEstimate& at, double top, double direction,
+                     const Eigen::MatrixXd& scatter) {
+  constexpr double kRoot = 1.959963984540054;  // of the .95 point of chi-square(1)
   const double floor =
       std::max(window.settings.floor, window.centre.kind == CentreKind::estimated ? 1.01 : 0.);
   const double low = std::log(floor), high = std::log(window.settings.ceiling);
-  const double drop = 1.920729410347062 / window.samples_effective();  // chi-square(1) .95, halved
-  Eigen::MatrixXd start;
-  const auto enough = [&](double x) {
+  const double samples = window.samples_effective();
+  Eigen::MatrixXd start = scatter;
+  // r - kRoot; without a fit the value counts as outside.
+  const auto miss = [&](double x) {
     const FixedPoint fit = fit_at(window, std::exp(x), start);
-    if (fit.reason != StopReason::converged) return true;
+    if (fit.reason != StopReason::converged) return kRoot;
     start = fit.scatter;
-    return log_likelihood(window, fit, std::exp(x)) < top - drop;
+    const double drop = top - log_likelihood(window, fit, std::exp(x));
+    return std::sqrt(2 * samples * std::max(drop, 0.)) - kRoot;
   };
-  double inside = std::log(nu), step = .1;
-  double outside = inside;
+  double inside = std::log(at.nu), inside_miss = -kRoot;
+  double step = std::clamp(kRoot * at.standard_error_log, .02, 1.);
+  double outside = inside, outside_miss = 0;
   for (;;) {
     outside = std::clamp(inside + direction * step, low, high);
-    if (enough(outside)) break;
+    outside_miss = miss(outside);
+    if (outside_miss >= 0) break;
     if (outside <= low || outside >= high) return std::exp(outside);
+    step = std::clamp(-step * outside_miss / (outside_miss - inside_miss), .02, 2 * step) * 1.05;
     inside = outside;
-    step *= 2;
+    inside_miss = outside_miss;
   }
-  for (int k = 0; k < 40 && std::abs(outside - inside) > 1e-7; ++k) {
-    const double middle = .5 * (inside + outside);
-    (enough(middle) ? outside : inside) = middle;
+  int kept = 0;  // which end the last steps kept: the Illinois rule halves its value
+  for (int k = 0; k < 40 && std::abs(outside - inside) > 1e-6; ++k) {
+    const double x = (inside * outside_miss - outside * inside_miss) / (outside_miss - inside_miss);
+    const double value = miss(x);
+    if (std::abs(value) < 1e-7) return std::exp(x);
+    (value < 0 ? inside : outside) = x;
+    (value < 0 ? inside_miss : outside_miss) = value;
+    const int side = value < 0 ? 1 : -1;
+    if (side == kept) (value < 0 ? outside_miss : inside_miss) *= .5;
+    kept = side;
   }
   return std::exp(.5 * (inside + outside));
 }
@@ -139,8 +155,8 @@ NuEstimate cold_likelihood(const Window& window) {
   const FixedPoint last = fit_at(window, estimate.nu, fit.scatter);
   if (last.reason != StopReason::converged) return estimate;
   const double top = log_likelihood(window, last, estimate.nu);
-  estimate.nu_low = profile_bound(window, estimate.nu, top, -1);
-  estimate.nu_high = profile_bound(window, estimate.nu, top, 1);
+  estimate.nu_low = profile_bound(window, estimate, top, -1, last.scatter);
+  estimate.nu_high = profile_bound(window, estimate, top, 1, last.scatter);
   return estimate;
 }
 

@@ -35,18 +35,7 @@ Eigen::ArrayXd equal(Eigen::Index n) {
 
 Eigen::MatrixXd t_samples(Eigen::Index p, Eigen::Index n, double nu, std::uint64_t seed) {
   std::mt19937_64 bits(seed);
-  std::normal_distribution<double> normal;
-  std::gamma_distribution<double> gamma(nu / 2, 2 / nu);
-  Eigen::MatrixXd x(p, n);
-  for (Eigen::Index i = 0; i < n; ++i) {
-    const double scale = 1 / std::sqrt(gamma(bits));
-    double before = 0;
-    for (Eigen::Index j = 0; j < p; ++j) {
-      before = j == 0 ? normal(bits) : .6 * before + .8 * normal(bits);
-      x(j, i) = before * scale;
-    }
-  }
-  return x;
+  return reference::t_samples(p, n, nu, bits);
 }
 
 // Oracle: test vector T1 (p 2, n 12, zero mean), computed by two independent implementations.

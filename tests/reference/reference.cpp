@@ -142,4 +142,19 @@ Eigen::MatrixXd wave_samples(Eigen::Index p, Eigen::Index n, bool shifted) {
   return x;
 }
 
+Eigen::MatrixXd t_samples(Eigen::Index p, Eigen::Index n, double nu, std::mt19937_64& bits) {
+  std::normal_distribution<double> normal;
+  std::gamma_distribution<double> gamma(nu / 2, 2 / nu);
+  Eigen::MatrixXd x(p, n);
+  for (Eigen::Index i = 0; i < n; ++i) {
+    const double scale = 1 / std::sqrt(gamma(bits));
+    double before = 0;
+    for (Eigen::Index j = 0; j < p; ++j) {
+      before = j == 0 ? normal(bits) : .6 * before + .8 * normal(bits);
+      x(j, i) = before * scale;
+    }
+  }
+  return x;
+}
+
 }  // namespace tailweir::reference

@@ -2,6 +2,7 @@
 #pragma once
 
 #include <Eigen/Core>
+#include <random>
 
 namespace tailweir::reference {
 
@@ -25,5 +26,8 @@ Posterior leave_one_out(const Fit& fit, const Eigen::ArrayXd& mass, Eigen::Index
 
 // Test vectors: x_ij = exp(1.2 sin(3.1 i + 1)) sin(12.9 i + 7.3 j + .4 i j) [+ .5 (j + 1)].
 Eigen::MatrixXd wave_samples(Eigen::Index p, Eigen::Index n, bool shifted);
+
+// n samples of t_p(0, S, nu), p x n, S the AR(1) matrix .6^|i-j|.
+Eigen::MatrixXd t_samples(Eigen::Index p, Eigen::Index n, double nu, std::mt19937_64& bits);
 
 }  // namespace tailweir::reference
