@@ -172,12 +172,12 @@ class Demo {
     }
     seen_.late_nu = e.nu;
     seen_.late_high = e.nu_high;
-    if (!seen_.fell && record.sequence > 500 && e.nu_high < seen_.calm_nu &&
-        e.nu < .6 * seen_.calm_nu) {
+    if (!seen_.fell && record.sequence > 500 && e.nu_high < seen_.calm_low) {
       seen_.fell = true;
       seen_.fell_at = record.sequence;
-      std::printf("          nu is down to %s, its interval now below the %s of before\n",
-                  short_number(e.nu).c_str(), short_number(seen_.calm_nu).c_str());
+      std::printf(
+          "          nu is down to %s, its whole interval now below the one around %s before\n",
+          short_number(e.nu).c_str(), short_number(seen_.calm_nu).c_str());
     }
   }
 
