@@ -104,7 +104,9 @@ void Horizon::refresh_nu() {
   if (has_nu_ && !exact_ && since_nu_ < tracker_.health().samples_effective / 4) return;
   since_nu_ = 0;
   if (nu_settings_.method == NuMethod::likelihood && exact_) return converge_jointly();
-  nu_ = nu_from_view();
+  const tail::NuEstimate found = nu_from_view();
+  if (!std::isfinite(found.nu)) return;  // the last one stays
+  nu_ = found;
   has_nu_ = true;
   if (nu_settings_.method == NuMethod::likelihood) {
     tracker_.set_nu(nu_.nu);

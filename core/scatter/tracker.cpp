@@ -86,7 +86,8 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
       polish_(dimension_, lift_),
       scratch_(dimension_, dimension_),
       block_(p_, p_),
-      column_(p_, 1) {
+      column_(p_, 1),
+      check_(p_, p_) {
   assert(nu > static_cast<double>(lift_));
   const std::size_t padded = static_cast<std::size_t>(precision_.padded());
   x_.assign(padded, 0);
@@ -259,6 +260,7 @@ void Tracker::absorb() {
   ++health_.since_polish;
   check_samples_left();
   if (tracking()) {
+    if (!std::isfinite(log_det_) || !(total_ > 0) || !std::isfinite(total_)) rebuild_wanted_ = true;
     if (rebuild_wanted_) {
       rebuild();
     } else {
@@ -736,37 +738,41 @@ void Tracker::centred(Eigen::Ref<Eigen::VectorXd> x) const {
 }
 
 bool Tracker::scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const {
-  double total = total_;
-  const Eigen::VectorXd* offset = &offset_;
-  const Eigen::VectorXd* unit = &unit_;
   if (tracking()) {
     precision_.settle();
     precision_.copy_to(scratch_);
-  } else {
-    if (!(good_total_ > 0)) return false;
-    scratch_ = good_;
-    total = good_total_;
-    offset = &good_offset_;
-    unit = &good_unit_;
+    if (form_scatter(scratch_, total_, offset_, unit_, s, m)) return true;
   }
-  Eigen::VectorXd centre = *offset;
-  block_ = scratch_.topLeftCorner(p_, p_);
+  return good_total_ > 0 && form_scatter(good_, good_total_, good_offset_, good_unit_, s, m);
+}
+
+// S and m from P, when they come out positive definite with digits to spare.
+bool Tracker::form_scatter(const Eigen::MatrixXd& precision, double total,
+                           const Eigen::VectorXd& offset, const Eigen::VectorXd& unit,
+                           Eigen::MatrixXd& s, Eigen::VectorXd& m) const {
+  block_ = precision.topLeftCorner(p_, p_);
   if (!spd::cholesky(block_)) return false;
+  column_.setZero();
   if (lift_ == 1) {
-    Eigen::MatrixXd shift = -scratch_.row(p_).head(p_).transpose();
-    spd::solve(block_, shift);
-    spd::solve_transposed(block_, shift);
-    centre += unit->cwiseProduct(shift.col(0));
+    column_ = -precision.row(p_).head(p_).transpose();
+    spd::solve(block_, column_);
+    spd::solve_transposed(block_, column_);
   }
   spd::inverse_from_cholesky(block_);
   block_ /= total;
+  check_ = block_;
+  if (!spd::cholesky(check_)) return false;
   for (Index j = 0; j < p_; ++j) {
-    for (Index i = j; i < p_; ++i) block_(i, j) *= (*unit)(i) * (*unit)(j);
+    if (!(check_(j, j) > 1e-7 * check_.row(j).head(j + 1).norm())) return false;
+    for (Index i = j; i < p_; ++i) block_(i, j) *= unit(i) * unit(j);
+    // Next to the ends of the number range a factorisation loses its digits.
+    if (!(block_(j, j) > 1e-290 && block_(j, j) < 1e300)) return false;
   }
   spd::mirror_lower(block_);
-  if (!block_.allFinite() || !centre.allFinite()) return false;
+  column_.col(0) = column_.col(0).cwiseProduct(unit) + offset;
+  if (!block_.allFinite() || !column_.allFinite()) return false;
   s = block_;
-  m = centre;
+  m = column_.col(0);
   return true;
 }
 

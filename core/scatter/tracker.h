@@ -124,6 +124,8 @@ class Tracker {
   void renormalise();
   void recount();
   bool build();
+  bool form_scatter(const Eigen::MatrixXd& precision, double total, const Eigen::VectorXd& offset,
+                    const Eigen::VectorXd& unit, Eigen::MatrixXd& s, Eigen::VectorXd& m) const;
   void rebuild();
   void fail(TrackerState state);
   void polish_if_due();
@@ -173,7 +175,7 @@ class Tracker {
   Gauge gauge_;
   double contraction_ = .3;  // what a repeated iteration leaves of the distance, learned
   double after_ = 0;         // distance thought left by the last iteration
-  mutable Eigen::MatrixXd scratch_, block_, column_;
+  mutable Eigen::MatrixXd scratch_, block_, column_, check_;
   Eigen::MatrixXd columns_;
   Index view_size_ = 0;
   std::int64_t view_first_ = 0;

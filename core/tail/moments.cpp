@@ -108,6 +108,7 @@ double light_tail_moment(const FitView& fit, double nu_start) {
     theta /= p * gain;
     const double next =
         theta > 1 ? std::clamp(2 * theta / (theta - 1), 2.01, kLightest) : kLightest;
+    if (!std::isfinite(next) || !std::isfinite(s)) return nu_start;  // absurd distances say nothing
     const bool settled = std::abs(next - nu) <= 1e-6 * nu;
     nu = next;
     if (settled) break;
