@@ -167,7 +167,9 @@ TEST(RunningFit, RankCountsThePast) {
     const double d = std::exp(random.log_distance(2, 4));
     int above = 0, count = 0;
     for (std::size_t i = past.size(); i > 0 && count < 20; --i, ++count) above += past[i - 1] >= d;
-    if (count > 0) EXPECT_DOUBLE_EQ(fit.rank_p_value(d), (1. + above) / (count + 1.)) << t;
+    if (count > 0) {
+      EXPECT_DOUBLE_EQ(fit.rank_p_value(d), (1. + above) / (count + 1.)) << t;
+    }
     past.push_back(d);
     fit.push(d);
   }
