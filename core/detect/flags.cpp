@@ -52,13 +52,16 @@ FlagScore Flags::score(const ScoredSample& sample, const ScatterKnowledge& known
       score.joint = joint_.apply(joint_model);
       if (channel_model < channel_.level()) score.channel = channel_.apply(channel_model);
     }
-    score.combined =
+    const double combined_model =
         channels_tested_ ? std::min(1., 2 * std::min(score.joint, score.channel)) : score.joint;
+    score.combined =
+        score.fitted && channels_tested_ ? combined_.apply(combined_model) : combined_model;
     if (remember && whole) {
       fit_.push(sample.distance);
       if (score.fitted) {
         joint_.push(joint_model);
         channel_.push(channel_model);
+        combined_.push(combined_model);
       }
     }
   }
@@ -81,6 +84,7 @@ void Flags::restore(const FlagState& state) {
   counts_ = state.counts;
   joint_.restore(state.joint);
   channel_.restore(state.channel);
+  combined_.restore(state.combined);
 }
 
 }  // namespace tailweir::detect
