@@ -1,8 +1,8 @@
 // Plain settings of the estimation core: what a panel is asked to estimate and with which memory.
 //
 // Defaults stand beside the members. validate() names the first wrong member by its key in the
-// settings file, so that a caller can add file, line and column. Nothing here speaks of speed: every
-// member changes results. Thread rule: plain values.
+// settings file, so that a caller can add file, line and column. Nothing here speaks of speed:
+// every member changes results. Thread rule: plain values.
 #pragma once
 
 #include <Eigen/Core>

@@ -10,23 +10,25 @@ namespace {
 constexpr double kPriorCount = 8;
 // Share of a new observation in what is learned.
 constexpr double kLearning = .3;
+// The mean e^2 since a polish grows like (samples/n)^kGrowth (tests/bench, drift table).
+constexpr double kGrowth = .75;
 
 }  // namespace
 
-Gauge::Gauge(double p, double n, double expected)
+Gauge::Gauge(double p, double n, double expected, double safety)
     // The constant falls from about 3 at p = 6 to 1 at p >= 100 (tests/bench, drift table).
-    : p_(p), n_(n), constant_(1 + 11 / p) {
+    : p_(p), n_(n), safety_(safety), constant_(1 + 11 / p) {
   const double r = expected * std::sqrt(n) / (constant_ * p);
-  rate_ = r * r / n;
+  rate_ = r * r;
 }
 
 double Gauge::rms_square(std::int64_t since) const {
-  const double prior = rate_ * static_cast<double>(since);
+  const double prior = rate_ * std::pow(static_cast<double>(since) / n_, kGrowth);
   return (square_ + kPriorCount * prior) / (static_cast<double>(count_) + kPriorCount);
 }
 
 double Gauge::estimate(double n, std::int64_t since) const {
-  const double grown = constant_ * p_ / std::sqrt(n) * std::sqrt(rms_square(since));
+  const double grown = safety_ * constant_ * p_ / std::sqrt(n) * std::sqrt(rms_square(since));
   return std::sqrt(after_ * after_ + grown * grown);
 }
 
@@ -39,7 +41,8 @@ void Gauge::polished(double before, double after, std::int64_t since) {
       constant_ += kLearning * (std::clamp(seen, .2, 10.) - constant_);
     }
     if (count_ > 0) {
-      const double seen = square_ / static_cast<double>(count_) / static_cast<double>(since);
+      const double seen = square_ / static_cast<double>(count_) /
+                          std::pow(static_cast<double>(since) / n_, kGrowth);
       const double share = kLearning * std::min(1., static_cast<double>(count_) / kPriorCount);
       rate_ += share * (seen - rate_);
     }

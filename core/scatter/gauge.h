@@ -14,8 +14,9 @@ namespace tailweir {
 class Gauge {
  public:
   Gauge() = default;
-  // p channels, n effective samples of the memory, expected: distance expected after n samples.
-  Gauge(double p, double n, double expected);
+  // p channels, n effective samples of the memory, expected: distance expected after n samples,
+  // safety: factor on the grown part, so that an estimate that errs does so on the safe side.
+  Gauge(double p, double n, double expected, double safety);
 
   // e of one sample that left or was probed.
   void observe(double e) {
@@ -34,15 +35,16 @@ class Gauge {
 
   template <typename Archive>
   void archive(Archive& a) {
-    a(p_, n_, constant_, rate_, after_, square_, count_);
+    a(p_, n_, safety_, constant_, rate_, after_, square_, count_);
   }
 
  private:
   double rms_square(std::int64_t since) const;
 
   double p_ = 1, n_ = 1;
+  double safety_ = 1;
   double constant_ = 1;  // c
-  double rate_ = 0;      // growth of the mean e^2 a sample
+  double rate_ = 0;      // mean e^2 after n samples
   double after_ = 0;     // distance the last polish left
   double square_ = 0;    // sum of e^2 since
   std::int64_t count_ = 0;

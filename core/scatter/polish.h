@@ -4,7 +4,8 @@
 //   d1_j/M, u_j the leave-one-out weight (weight.h),  G = sum_j omega_j u_j y_j y_j' + L' E L,
 //   P_new = L G^-1 L',  W_new = sum omega_j u_j + W_E,  w_j := u_j.
 // The distance of the state before it to the fixed point is free: with D = G W/M and
-// t = tr(D)/p - 1, F^2 = gs^2 |D - (1 + t) I|_F^2 + gc^2 p t^2 (gains in weight.h).
+// t = tr(D)/p - 1, F^2 = gs^2 |D - (1 + t) I|_F^2 + gc^2 p t^2 (gains in weight.h; for unequal
+// masses t comes from the mean weight, see judge()).
 //
 // It works on a snapshot of P while the tracker goes on; samples that entered or left meanwhile are
 // replayed on the new matrix at the end, two a step, until it has caught up. What is done in a step
@@ -23,12 +24,13 @@ namespace tailweir {
 
 // The state a polish starts from; dimension D = p + lift, nu the lifted one.
 struct PolishStart {
-  double total = 0;       // W
-  double mass = 0;        // M
-  double nu = 4;          // of the weights (nu - 1 when lifted)
-  double channels = 1;    // p of the weights (p + 1 when lifted)
-  int current = 0;        // which of the ring's weights is in use
-  double tail_total = 0;  // W_E
+  double total = 0;              // W
+  double mass = 0;               // M
+  double nu = 4;                 // of the weights (nu - 1 when lifted)
+  double channels = 1;           // p of the weights (p + 1 when lifted)
+  int current = 0;               // which of the ring's weights is in use
+  double tail_total = 0;         // W_E
+  double samples_effective = 0;  // n_eff when masses differ, 0 when they are equal
 };
 
 class Polish {

@@ -37,6 +37,9 @@ double error_for(double p, double nu, double n) {
   return std::sqrt((sigma1 * p * (p + 1) + sigma2 * p) / n);
 }
 
+// What the first iteration after some drift leaves of the distance (tests/bench, drift table).
+double first_contraction(double p, bool half_life) { return (half_life ? .65 : 1.) / (6 + p / 11); }
+
 double kept_half_lives(const TrackerSettings& settings, double nu) {
   if (!is_half_life(settings.memory.kind)) return 0;
   if (!(settings.tolerance > 0)) return kKeptHalfLives;
@@ -101,7 +104,8 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
   good_offset_ = offset_;
   good_unit_ = unit_;
   const double n = steady_samples();
-  gauge_ = Gauge(static_cast<double>(p_), n, .12 * error_for(static_cast<double>(p_), nu, n));
+  gauge_ = Gauge(static_cast<double>(p_), n, .12 * error_for(static_cast<double>(p_), nu, n),
+                 is_half_life(settings.memory.kind) ? 1.35 : 1.1);
 }
 
 double Tracker::steady_samples() const {
@@ -115,6 +119,11 @@ double Tracker::steady_samples() const {
     default:
       return std::max(health_.samples_effective, 5. * static_cast<double>(dimension_));
   }
+}
+
+// n_eff for a half-life, 0 for a window.
+double Tracker::unequal_masses() const {
+  return is_half_life(settings_.memory.kind) ? mass_ * mass_ / mass_square_ : 0;
 }
 
 double Tracker::statistical_error() const {
@@ -544,7 +553,7 @@ void Tracker::rebuild() {
   if (!build()) return;
   for (int k = 0; k < (exact() ? kExactIterations : kIterations); ++k) {
     if (!iterate()) return;
-    if (contraction_ * health_.residual_at_polish <= tolerance()) return;
+    if (after_ <= tolerance()) return;
   }
 }
 
@@ -566,7 +575,7 @@ void Tracker::polish_if_due() {
   }
   health_.samples_effective = mass_ * mass_ / mass_square_;
   const double n = health_.samples_effective;
-  const bool due = static_cast<double>(health_.since_polish) >= n ||
+  const bool due = exact() || static_cast<double>(health_.since_polish) >= n ||
                    gauge_.estimate(n, health_.since_polish) > tolerance();
   if (!due) return;
   retire_tail();
@@ -575,14 +584,14 @@ void Tracker::polish_if_due() {
   if (!at_once) {
     polish_.start(precision_, ring_,
                   {total_, mass_, nu_ - static_cast<double>(lift_), static_cast<double>(dimension_),
-                   current_, tail_total_});
+                   current_, tail_total_, unequal_masses()});
     polish_.step(ring_, tail_);
     return;
   }
   const int most = exact() ? kExactIterations : kIterations;
   for (int k = 0; k < most; ++k) {
     if (!iterate()) return;
-    if (contraction_ * health_.residual_at_polish <= tolerance()) return;
+    if (after_ <= tolerance()) return;
   }
 }
 
@@ -591,14 +600,14 @@ bool Tracker::iterate() {
   const double before = health_.iterations > 0 ? health_.residual_at_polish : 0;
   polish_.start(precision_, ring_,
                 {total_, mass_, nu_ - static_cast<double>(lift_), static_cast<double>(dimension_),
-                 current_, tail_total_});
+                 current_, tail_total_, unequal_masses()});
   while (polish_.active()) polish_.step(ring_, tail_);
   if (polish_.stage() == Polish::Stage::failed) {
     fail(TrackerState::not_positive_definite);
     return false;
   }
   const double now = std::max(polish_.residual(), polish_.centre_residual());
-  if (before > 1e-11 && now > 0) {  // two in a row show what an iteration leaves
+  if (exact() && before > 1e-11 && now > 0) {  // two in a row show what an iteration leaves
     contraction_ += .2 * (std::clamp(now / before, .02, .6) - contraction_);
   }
   adopt();
@@ -611,8 +620,12 @@ void Tracker::adopt() {
   total_ = polish_.total();
   log_det_ = polish_.log_det();
   const double found = polish_.residual();
-  gauge_.polished(found, contraction_ * found,
-                  health_.since_polish - (ring_.end() - polish_.last()));
+  const double left =
+      health_.iterations == 0
+          ? first_contraction(static_cast<double>(p_), is_half_life(settings_.memory.kind))
+          : contraction_;
+  after_ = left * std::max(found, polish_.centre_residual());
+  gauge_.polished(found, left * found, health_.since_polish - (ring_.end() - polish_.last()));
   health_.residual_at_polish = std::max(found, polish_.centre_residual());
   health_.since_polish = ring_.end() - polish_.last();
   health_.condition = polish_.condition();

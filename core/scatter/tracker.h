@@ -123,6 +123,7 @@ class Tracker {
   bool iterate();
   void adopt();
   void update_health();
+  double unequal_masses() const;
   double statistical_error() const;
   double tolerance() const;
   double steady_samples() const;
@@ -162,7 +163,8 @@ class Tracker {
 
   Polish polish_;
   Gauge gauge_;
-  double contraction_ = .14;  // what one iteration leaves of the distance, learned
+  double contraction_ = .3;  // what a repeated iteration leaves of the distance, learned
+  double after_ = 0;         // distance thought left by the last iteration
   mutable Eigen::MatrixXd scratch_, block_;
   Eigen::MatrixXd columns_;
   Index view_size_ = 0;

@@ -30,8 +30,6 @@ double log_density_of_log_distance(double y, double channels, double nu);
 // chi-square limit.
 double tail_probability(double distance, double channels, double nu);
 
-// Density of y is smooth in nu; E|.| of the weight: gamma(nu) solves E[u(d) d] = p for a fit at nu0
-// of data with nu, where d = gamma-scaled; see core/tail/README.md.
 // Fisher information for nu in one sample, scatter known (I_nunu) and scale profiled (I_eff).
 double information_nu(double channels, double nu);
 double information_nu_scale_profiled(double channels, double nu);

@@ -1,7 +1,8 @@
 // The records tailweir publishes: one estimate per sample and horizon, flags, alerts, refusals.
 //
 // They are the actions of the engine, the payload of the wire and the lines of replay: one set of
-// fields everywhere (docs: service/wire/README.md). Thread rule: plain values, moved between threads.
+// fields everywhere (docs: service/wire/README.md). Thread rule: plain values, moved between
+// threads.
 #pragma once
 
 #include <cstdint>
@@ -27,6 +28,7 @@ struct EstimateRecord {
   std::uint32_t panel = 0;     // index in the settings
   std::uint32_t horizon = 0;   // index in the panel
   std::uint32_t channels_version = 1;
+  bool flagged = false;  // a flag of this horizon follows
   Estimate estimate;
   std::vector<double> centre;   // p, empty when the horizon has no scatter yet
   std::vector<double> scatter;  // p(p+1)/2, lower triangle by rows, empty likewise

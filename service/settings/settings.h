@@ -18,16 +18,22 @@ enum class EntersAs { level, change };
 enum class Step { log_difference, difference, relative_difference };
 
 struct ChannelSettings {
-  std::string name;                    // [a-z0-9_.-]{1,31}
+  std::string name;  // [a-z0-9_.-]{1,31}
   EntersAs enters_as = EntersAs::change;
-  Step step = Step::log_difference;    // for EntersAs::level
-  std::string unit;                    // a label only
-  double scale = 1;                    // multiplies the change; finite, not 0
+  Step step = Step::log_difference;  // for EntersAs::level
+  std::string unit;                  // a label only
+  double scale = 1;                  // multiplies the change; finite, not 0
+};
+
+struct AlertSettings {
+  bool given = false;                        // the key was present
+  double mean_samples_between_false = 5000;  // > 100, all kinds and directions together
 };
 
 struct PanelInput {
-  std::vector<std::size_t> channels;   // indices into Settings::channels, in the panel's order
-  PanelSettings core;                  // name, horizons and all that the core needs
+  std::vector<std::size_t> channels;  // indices into Settings::channels, in the panel's order
+  PanelSettings core;                 // name, horizons and all that the core needs
+  AlertSettings alerts;
 };
 
 struct FeedSettings {
@@ -41,7 +47,9 @@ struct Settings {
   std::vector<PanelInput> panels;
   std::optional<std::string> publish_address;
   std::optional<std::string> control_address;
-  std::string source;                  // file name it came from, for messages
+  std::optional<std::string> store_directory;
+  std::optional<std::string> page_address;  // HOST:PORT
+  std::string source;                       // file name it came from, for messages
 };
 
 // Reads and checks a settings file (at most 1 MB). Fault: one line with file, line and column.

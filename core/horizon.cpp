@@ -1,0 +1,218 @@
+#include "core/horizon.h"
+
+#include <algorithm>
+#include <cmath>
+#include <limits>
+
+#include "core/student/student.h"
+
+namespace tailweir {
+namespace {
+
+constexpr double kNaN = std::numeric_limits<double>::quiet_NaN();
+// Range in which the scatter follows an estimated nu.
+constexpr double kLeastFit = 2, kMostFit = 50;
+// nu of the first fit, before there is an estimate.
+constexpr double kFirstNu = 5;
+// A joint maximum is reached when ln nu moves less than this.
+constexpr double kJointTolerance = 1e-9;
+// Channels named in a flag.
+constexpr std::size_t kNamed = 5;
+
+TrackerSettings tracker_settings(const PanelSettings& panel, const HorizonSettings& settings) {
+  TrackerSettings t;
+  t.channels = panel.channels;
+  t.centre = panel.centre;
+  t.memory = settings.memory;
+  t.tolerance = settings.tolerance.value_or(0);
+  return t;
+}
+
+double first_nu(const PanelSettings& panel) {
+  return panel.nu.method == NuMethod::fixed ? panel.nu.fixed : kFirstNu;
+}
+
+}  // namespace
+
+Horizon::Horizon(const PanelSettings& panel, const HorizonSettings& settings)
+    : nu_settings_(panel.nu),
+      flag_settings_(panel.flags),
+      centre_(panel.centre),
+      p_(panel.channels),
+      exact_(settings.tolerance && *settings.tolerance <= 1e-6),
+      tracker_(tracker_settings(panel, settings), first_nu(panel)),
+      workspace_(tracker_.view_mass().size()),
+      centred_(panel.channels),
+      q_(panel.channels),
+      diagonal_(panel.channels),
+      sample_(panel.channels) {
+  estimate_.nu = estimate_.nu_low = estimate_.nu_high = kNaN;
+  estimate_.nu_fit = estimate_.covariance_factor = estimate_.log_volatility = kNaN;
+  estimate_.residual = estimate_.distance = estimate_.p_value = estimate_.condition = kNaN;
+  if (nu_settings_.method == NuMethod::fixed) {
+    nu_.nu = nu_.nu_low = nu_.nu_high = nu_.unblended = nu_settings_.fixed;
+    nu_.status = tail::NuStatus::fixed;
+    has_nu_ = true;
+  }
+}
+
+bool Horizon::push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time_ns, Flag& flag) {
+  estimate_.distance = tracker_.predict(x, time_ns);
+  estimate_.p_value =
+      has_nu_ ? student::tail_probability(estimate_.distance, static_cast<double>(p_), nu_.nu)
+              : kNaN;
+  const bool flagged = estimate_.p_value < flag_settings_.rate;
+  if (flagged) fill_flag(x, flag);
+  tracker_.absorb();
+  ++since_nu_;
+  if (tracker_.tracking() && tracker_.health().iterations > 0) refresh_nu();
+  publish();
+  return flagged;
+}
+
+void Horizon::fill_flag(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag) {
+  flag.distance = estimate_.distance;
+  flag.p_value = estimate_.p_value;
+  flag.severity =
+      estimate_.p_value < flag_settings_.severe_rate ? Severity::severe : Severity::unusual;
+  tracker_.score(centred_, q_, diagonal_);
+  const double dof = nu_.nu + static_cast<double>(p_ - 1);
+  for (Index j = 0; j < p_; ++j) {
+    ChannelBlame blame;
+    blame.channel = j;
+    blame.value = x(j);
+    blame.residual = q_(j) / std::sqrt(diagonal_(j));
+    blame.share = centred_(j) * q_(j);
+    const double rest = std::max(flag.distance - blame.residual * blame.residual, 0.);
+    blame.p_value =
+        student::two_sided_t_probability(blame.residual * std::sqrt(dof / (nu_.nu + rest)), dof);
+    flag.channels.push_back(blame);
+  }
+  std::stable_sort(flag.channels.begin(), flag.channels.end(),
+                   [](const ChannelBlame& a, const ChannelBlame& b) {
+                     return std::abs(a.residual) > std::abs(b.residual);
+                   });
+  if (flag.channels.size() > kNamed) flag.channels.resize(kNamed);
+}
+
+void Horizon::refresh_nu() {
+  if (nu_settings_.method == NuMethod::fixed) return;
+  // Polishes of a half-life come more often than nu can move: every quarter memory is enough.
+  if (has_nu_ && !exact_ && since_nu_ < tracker_.health().samples_effective / 4) return;
+  since_nu_ = 0;
+  if (nu_settings_.method == NuMethod::likelihood && exact_) return converge_jointly();
+  nu_ = nu_from_view();
+  has_nu_ = true;
+  if (nu_settings_.method == NuMethod::likelihood) {
+    tracker_.set_nu(nu_.nu);
+  } else {
+    tracker_.set_nu(std::clamp(nu_.nu, kLeastFit, kMostFit));
+  }
+}
+
+tail::NuEstimate Horizon::nu_from_view() {
+  const Index n = tracker_.view_size();
+  const tail::FitView fit{tracker_.view_mass().head(n),
+                          tracker_.view_weight().head(n),
+                          tracker_.view_distance().head(n),
+                          p_,
+                          tracker_.view_nu(),
+                          centre_.kind == CentreKind::estimated};
+  if (workspace_.delta.size() < n) workspace_ = tail::Workspace(2 * n);
+  switch (nu_settings_.method) {
+    case NuMethod::likelihood:
+      return tail::likelihood_step(fit, nu_settings_);
+    case NuMethod::pop:
+      return tail::pop_step(fit, nu_settings_);
+    case NuMethod::censored:
+      return tail::leave_one_out_censored(fit, nu_settings_, workspace_);
+    case NuMethod::kurtosis:
+    case NuMethod::trace_ratio: {
+      Eigen::MatrixXd samples(p_, n);
+      for (Index k = 0; k < n; ++k) tracker_.view_sample(k, samples.col(k));
+      const Eigen::ArrayXd mass = tracker_.view_mass().head(n);
+      if (nu_settings_.method == NuMethod::kurtosis) {
+        return tail::kurtosis(samples, mass, centre_, nu_settings_);
+      }
+      Eigen::MatrixXd s;
+      Eigen::VectorXd m;
+      if (!tracker_.scatter(s, m)) return nu_;
+      if (centre_.kind == CentreKind::estimated) m = samples * mass.matrix();
+      const double trace =
+          ((samples.colwise() - m).colwise().squaredNorm().transpose().array() * mass).sum();
+      return tail::trace_ratio_step(trace, s.trace(), p_, nu_settings_);
+    }
+    default:
+      break;
+  }
+  return tail::leave_one_out(fit, nu_settings_, workspace_, has_nu_ ? &nu_ : nullptr);
+}
+
+// Joint maximum of the likelihood over scatter, centre and nu, from the last one: each trial nu
+// gets its fixed point, Aitken's extrapolation in ln nu does the rest.
+void Horizon::converge_jointly() {
+  double x = std::log(tracker_.nu());
+  double before = x, before_image = x;
+  for (int round = 0; round < 60; ++round) {
+    nu_ = nu_from_view();
+    has_nu_ = true;
+    const double image = std::log(nu_.nu);
+    if (std::abs(image - x) <= kJointTolerance) return;
+    double next = image;
+    if (round > 0 && x != before) {
+      const double rate = (image - before_image) / (x - before);
+      if (rate > 0 && rate < .99) next = x + (image - x) / (1 - rate);
+    }
+    const double low = std::log(std::max(
+        nu_settings_.floor, centre_.kind == CentreKind::estimated ? 1.01 : nu_settings_.floor));
+    next = std::clamp(next, low, std::log(nu_settings_.ceiling));
+    before = x;
+    before_image = image;
+    x = next;
+    tracker_.set_nu(std::exp(x));
+    for (int k = 0; k < 80; ++k) {
+      if (!tracker_.polish_now()) return;
+      if (tracker_.health().residual_at_polish < 1e-10) break;
+    }
+  }
+}
+
+void Horizon::publish() {
+  const TrackerHealth& health = tracker_.health();
+  estimate_.iterations = health.iterations;
+  estimate_.since_polish = health.since_polish;
+  estimate_.samples_effective = health.samples_effective;
+  estimate_.nu_status = nu_.status;
+  switch (tracker_.state()) {
+    case TrackerState::filling:
+      estimate_.state = HorizonState::warming;
+      estimate_.reason = StateReason::too_few_samples;
+      return;
+    case TrackerState::not_positive_definite:
+      estimate_.state = HorizonState::impaired;
+      estimate_.reason = StateReason::not_positive_definite;
+      return;
+    case TrackerState::ill_conditioned:
+      estimate_.state = HorizonState::impaired;
+      estimate_.reason = StateReason::ill_conditioned;
+      return;
+    case TrackerState::not_converged:
+      estimate_.state = HorizonState::impaired;
+      estimate_.reason = StateReason::not_converged;
+      return;
+    case TrackerState::tracking:
+      break;
+  }
+  estimate_.state = HorizonState::live;
+  estimate_.reason = StateReason::none;
+  estimate_.nu = nu_.nu;
+  estimate_.nu_low = nu_.nu_low;
+  estimate_.nu_high = nu_.nu_high;
+  estimate_.nu_fit = tracker_.view_nu();
+  estimate_.covariance_factor = nu_.nu > 2 ? nu_.nu / (nu_.nu - 2) : kNaN;
+  estimate_.log_volatility = health.log_det / (2 * static_cast<double>(p_));
+  estimate_.residual = health.residual;
+  estimate_.condition = health.condition;
+}
+
+}  // namespace tailweir

@@ -1,0 +1,52 @@
+// One memory of a panel: the tracker, the degrees of freedom and the flags of one horizon.
+//
+// Per sample: score it against the fit before it, absorb it, and when an iteration has finished
+// refresh nu from what it left behind. nu_fit, at which the scatter is the fixed point, follows nu
+// within [2, 50]; a fixed or a likelihood nu is its own. Thread rule: one owner; deterministic.
+#pragma once
+
+#include <Eigen/Core>
+#include <cstdint>
+
+#include "core/estimate.h"
+#include "core/scatter/tracker.h"
+#include "core/settings.h"
+#include "core/tail/tail.h"
+
+namespace tailweir {
+
+class Horizon {
+ public:
+  // Preconditions: panel came out of validate(); settings is one of its horizons.
+  Horizon(const PanelSettings& panel, const HorizonSettings& settings);
+
+  // Scores and absorbs one sample (p finite values). True, and the flag filled but for its horizon
+  // index, when the sample is flagged.
+  bool push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time_ns, Flag& flag);
+
+  const Estimate& estimate() const { return estimate_; }
+  bool scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const { return tracker_.scatter(s, m); }
+  const TrackerHealth& health() const { return tracker_.health(); }
+
+ private:
+  void fill_flag(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag);
+  void refresh_nu();
+  tail::NuEstimate nu_from_view();
+  void converge_jointly();
+  void publish();
+
+  NuSettings nu_settings_;
+  FlagSettings flag_settings_;
+  CentreSettings centre_;
+  Index p_;
+  bool exact_;
+  Tracker tracker_;
+  tail::NuEstimate nu_;
+  bool has_nu_ = false;
+  double since_nu_ = 0;  // samples since nu was refreshed
+  tail::Workspace workspace_;
+  Estimate estimate_;
+  Eigen::VectorXd centred_, q_, diagonal_, sample_;
+};
+
+}  // namespace tailweir
