@@ -22,7 +22,7 @@ void draw(SampleGenerator& random, double nu, double rho, Eigen::VectorXd& x) {
 // Oracle: an independent program's threshold for a per-sample chart with a known reference,
 // 1.339 (p 20) and 3.35 (p 4) at run length 5000. Statistical: 400000 samples expect 80 raises;
 // five standard deviations of 9, doubled for the clustering of excursions.
-TEST(ShapeMonitor, KnownReferenceRunLength) {
+TEST(StatisticalShapeMonitor, KnownReferenceRunLength) {
   const double cases[][2] = {{20, 1.339}, {4, 3.35}};
   for (const auto& c : cases) {
     ShapeSettings settings;

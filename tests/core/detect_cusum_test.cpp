@@ -45,7 +45,7 @@ TEST(CusumChain, HawkinsPairs) {
 
 // Statistical: mean of 4000 run lengths, standard error 168/sqrt(4000) = 2.7 (run lengths are
 // nearly exponential); five standard errors, false failure 6e-7.
-TEST(CusumChain, HandbookRunLengthBySimulation) {
+TEST(StatisticalCusum, HandbookRunLengthBySimulation) {
   CounterRandom random(5, 0);
   double total = 0;
   const int runs = 4000;
@@ -114,7 +114,7 @@ class TabulatedIncrement {
 
 // Cited values: plain ratio charts at run length 5000. The ratio's density is singular at its
 // extremes, which the chain's states resolve to about .01.
-TEST(CusumChain, PlainTailRatioThresholds) {
+TEST(SlowCusumChain, PlainTailRatioThresholds) {
   const auto exact = [](double p, double new_nu, double cap, int states = 200) {
     const TabulatedIncrement below(p, 8, new_nu, cap);
     return cusum_threshold([&](double z) { return below(z); }, 5000, states);
@@ -139,7 +139,7 @@ TEST(Calibration, PiecesGiveTheSameThreshold) {
 // Statistical: 150 fresh chains against the shipped table, between its knots too; the error of a
 // simulated h at 150 chains is about .1, plus the table's own .04 and the interpolation. Fixed
 // seed.
-TEST(Calibration, ShippedTableAgreesWithFreshSimulation) {
+TEST(StatisticalCalibration, ShippedTableAgreesWithFreshSimulation) {
   const struct {
     double p, nu;
     TailDirection direction;

@@ -86,7 +86,7 @@ TEST(TailMonitor, IgnoresWhatIsNotFinite) {
 
 // Statistical: mean delay about 50 over 60 runs, standard deviation of a run about 33: bound at 5.
 // The design's own figure (unguarded, known reference) is 49 from steady state.
-TEST(TailMonitor, RaisesConfirmsAndDatesAHeavierTail) {
+TEST(StatisticalTailMonitor, RaisesConfirmsAndDatesAHeavierTail) {
   double delay = 0;
   int used = 0, confirmed = 0;
   double dated = 0;
@@ -120,7 +120,7 @@ TEST(TailMonitor, RaisesConfirmsAndDatesAHeavierTail) {
 
 // Statistical: probability of a raise within 1000 samples, one direction at 5000 nominal: .18 at
 // most on paper; 80 runs, bound at the figure plus 4.5 standard errors of .045.
-TEST(TailMonitor, VolatilityDoesNotRaiseTailAlerts) {
+TEST(StatisticalTailMonitor, VolatilityDoesNotRaiseTailAlerts) {
   for (World world : kWorlds) {
     int heavier = 0, lighter = 0, used = 0;
     for (std::uint64_t run = 0; run < 80; ++run) {
@@ -150,7 +150,7 @@ TEST(TailMonitor, VolatilityDoesNotRaiseTailAlerts) {
 // Statistical: at one direction's 5000 nominal with a known reference, 600000 quiet samples expect
 // 120 raises a direction, 240 in all; bounds at five standard deviations of the count and of the
 // threshold (6% in run length at one standard error). Confirmed: at most 5%, measured 1%.
-TEST(TailMonitor, FalseRaisesAreAsRareAsAskedAndSeldomConfirmed) {
+TEST(StatisticalTailMonitor, FalseRaisesAreAsRareAsAskedAndSeldomConfirmed) {
   SampleGenerator random(71);
   TailMonitor monitor(known(20, 8));
   int raised = 0, confirmed = 0;
@@ -164,7 +164,7 @@ TEST(TailMonitor, FalseRaisesAreAsRareAsAskedAndSeldomConfirmed) {
   EXPECT_LE(confirmed, .05 * raised + 4);
 }
 
-TEST(TailMonitor, ConfirmedAlertRecoversAfterAReturn) {
+TEST(StatisticalTailMonitor, ConfirmedAlertRecoversAfterAReturn) {
   int recovered = 0, used = 0;
   for (std::uint64_t run = 0; run < 30; ++run) {
     SampleGenerator random(900 + run);
