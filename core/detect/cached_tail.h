@@ -1,7 +1,7 @@
 // A tail probability as a function of distance, remembered on a grid and interpolated between: most
 // samples are ordinary, and need no incomplete beta function of their own.
 //
-// ln P is remembered at ln D = first + number/8, computed when first needed, interpolated by the
+// ln P is remembered at ln D = first + number/10, computed when first needed, interpolated by the
 // cubic through four neighbours (relative error below 1e-4 for the tails used here). Below
 // kExactBelow the exact value is computed, so that no decision hangs on an interpolation. Thread
 // rule: one owner. No allocation after construction.
@@ -44,8 +44,8 @@ class CachedTail {
   }
 
  private:
-  static constexpr double kCell = .125;
-  static constexpr int kCells = 160;
+  static constexpr double kCell = .1;
+  static constexpr int kCells = 200;
   static constexpr double kUnknown = 1;
   static constexpr double kLogExactBelow = -3.912023005428146;  // ln kExactBelow
 

@@ -44,12 +44,26 @@ FlagScore Flags::score(const ScoredSample& sample, const ScatterKnowledge& known
     const double joint_tail = joint(sample, known, whole);
     // No degrees of freedom left (fewer samples than channels): nothing can be said.
     score.joint = std::isnan(joint_tail) ? 1 : joint_tail;
-    const double largest = std::max({rates_.unusual, rates_.gate, 1e-12});
-    score.channel = channels_tested_ ? test_.smallest(sample, known, .5 * largest) : 1;
+    const double seen = std::max({rates_.unusual, rates_.gate, channel_.level()});
+    score.channel = channels_tested_ ? test_.smallest(sample, known, seen) : 1;
     score.rank = whole ? fit_.rank_p_value(sample.distance) : score.joint;
-    score.combined =
+    const double joint_model = score.joint, channel_model = score.channel;
+    if (score.fitted) {
+      score.joint = joint_.apply(joint_model);
+      if (channel_model < channel_.level()) score.channel = channel_.apply(channel_model);
+    }
+    const double combined_model =
         channels_tested_ ? std::min(1., 2 * std::min(score.joint, score.channel)) : score.joint;
-    if (remember && whole) fit_.push(sample.distance);
+    score.combined =
+        score.fitted && channels_tested_ ? combined_.apply(combined_model) : combined_model;
+    if (remember && whole) {
+      fit_.push(sample.distance);
+      if (score.fitted) {
+        joint_.push(joint_model);
+        channel_.push(channel_model);
+        combined_.push(combined_model);
+      }
+    }
   }
   score.level = score.combined <= rates_.severe    ? FlagLevel::severe
                 : score.combined <= rates_.unusual ? FlagLevel::unusual
@@ -68,6 +82,9 @@ FlagScore Flags::score(const ScoredSample& sample, const ScatterKnowledge& known
 void Flags::restore(const FlagState& state) {
   fit_.restore(state.fit);
   counts_ = state.counts;
+  joint_.restore(state.joint);
+  channel_.restore(state.channel);
+  combined_.restore(state.combined);
 }
 
 }  // namespace tailweir::detect

@@ -2,7 +2,7 @@
 //
 // Per sample three p-values and what they make together:
 //   joint    P(D >= distance): the mixed F until the running fit is ready, then the running fit
-//   channel  the smallest channel p-value, Bonferroni-corrected (1 where none can reach the rate)
+//   channel  the smallest channel p-value, Bonferroni-corrected (1 where it is not small)
 //   rank     (1 + #{past >= D})/(K + 1), free of any distribution, shown beside the joint one
 //   combined min(1, 2 min(joint, channel)), which is what the rates are compared with.
 // A joint test alone cannot see one bad channel of many. Combined is at most nominal and close to
@@ -19,6 +19,7 @@
 
 #include "core/detect/channel_test.h"
 #include "core/detect/mixed_tail.h"
+#include "core/detect/recalibration.h"
 #include "core/detect/running_fit.h"
 
 namespace tailweir::detect {
@@ -49,6 +50,7 @@ struct FlagCounts {
 struct FlagState {
   RunningFitState fit;
   FlagCounts counts;
+  RecalibrationState joint, channel, combined;
 };
 
 class Flags {
@@ -77,7 +79,9 @@ class Flags {
   const FlagCounts& counts() const { return counts_; }
   const RunningFit& fit() const { return fit_; }
 
-  FlagState state() const { return {fit_.state(), counts_}; }
+  FlagState state() const {
+    return {fit_.state(), counts_, joint_.state(), channel_.state(), combined_.state()};
+  }
   void restore(const FlagState& state);
 
  private:
@@ -89,6 +93,7 @@ class Flags {
   RunningFit fit_;
   ChannelTest test_;
   PredictiveTail tail_;
+  Recalibration joint_{.03}, channel_{.03}, combined_{.03};
   FlagCounts counts_;
 };
 

@@ -46,7 +46,7 @@ ShapeMonitor::ShapeMonitor(const ShapeSettings& settings)
   state_.fast = state_.slow = state_.whitener = Eigen::MatrixXd::Identity(p, p);
   state_.along = Eigen::MatrixXd::Zero(p, p);
   state_.block = scaled_ = Eigen::MatrixXd::Zero(p, settings.batch);
-  scratch_ = Eigen::MatrixXd::Zero(p, p);
+  scratch_ = change_ = Eigen::MatrixXd::Zero(p, p);
   product_ = Eigen::VectorXd::Zero(p);
 }
 
@@ -156,11 +156,13 @@ void ShapeMonitor::raise() {
   state_.along_reference = state_.along.cwiseProduct(scratch_).sum();
   state_.delta = std::max(kSmallestDelta, length * (state_.q - 1) / state_.q);
   state_.reverse = 0;
-  name_pair(alert);
+  name_pair();
 }
 
 // The change back in channels' units, L (M - R) L', as a change of correlation. p^3 multiply-adds.
-void ShapeMonitor::name_pair(Alert& alert) {
+void ShapeMonitor::name_pair() {
+  Alert& alert = state_.alert;
+  change_ = state_.fast - state_.slow;
   const Index p = settings_.channels;
   const Eigen::MatrixXd& l = state_.whitener;
   Eigen::Ref<Eigen::VectorXd> row = scratch_.col(0);
@@ -169,7 +171,7 @@ void ShapeMonitor::name_pair(Alert& alert) {
     row.setZero();
     row.head(k + 1) = l.row(k).head(k + 1).transpose();
     const double size_k = row.norm();
-    spd::symmetric_multiply(state_.along, row.data(), product_.data());
+    spd::symmetric_multiply(change_, row.data(), product_.data());
     for (Index j = 0; j < k; ++j) {
       const double change = l.row(j).head(j + 1).dot(product_.head(j + 1));
       const double size = std::abs(change) / (size_k * l.row(j).head(j + 1).norm());
@@ -198,6 +200,7 @@ bool ShapeMonitor::follow() {
     if (alert.wald >= kWaldBound) {
       alert.stage = state_.stage = AlertStage::confirmed;
       alert.changed_at = state_.t;
+      name_pair();
       return true;
     }
     if (alert.wald > -kWaldBound && state_.t - alert.raised_at < settings_.longest_raise) {
@@ -211,8 +214,12 @@ bool ShapeMonitor::follow() {
     return true;
   }
   if (state_.t - alert.since < settings_.re_reference_after) return false;
+  name_pair();
+  // The new reference begins as the last memory and is averaged up before anything is watched.
   state_.slow = state_.fast;
   close(AlertStage::re_referenced);
+  state_.absorbed = static_cast<std::int64_t>(settings_.memory * p_);
+  state_.stage = AlertStage::learning;
   return true;
 }
 

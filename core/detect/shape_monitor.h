@@ -81,7 +81,7 @@ class ShapeMonitor {
   void update_slow(bool frozen);
   bool watch();
   void raise();
-  void name_pair(Alert& alert);
+  void name_pair();
   bool follow();
   void close(AlertStage stage);
 
@@ -89,7 +89,7 @@ class ShapeMonitor {
   double p_, rate_, slow_rate_, norm_, threshold_;
   std::int64_t learn_;
   double square_ = 0;  // |M - R|_F^2 of the last batch
-  Eigen::MatrixXd scaled_, scratch_;
+  Eigen::MatrixXd scaled_, scratch_, change_;
   Eigen::VectorXd product_;
   ShapeState state_;
 };

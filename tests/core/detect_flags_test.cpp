@@ -189,7 +189,7 @@ struct Stream {
 
 // Statistical: 60000 samples at rate 1e-2 expect 600 at most; joint and channel tests together make
 // .9-1 of it. Bounds at five standard deviations and more.
-TEST(Flags, KeepTheirRateAndCountWhatWasExpected) {
+TEST(StatisticalFlags, KeepTheirRateAndCountWhatWasExpected) {
   Stream stream;
   FlagRates rates;
   rates.unusual = 1e-2;
