@@ -10,9 +10,9 @@
 namespace tailweir::oracles {
 
 Eigen::MatrixXd r_matrix(const std::string& expression) {
-  const std::string script =
-      "m <- as.matrix(" + expression +
-      "); cat(nrow(m), ncol(m), '\\n'); cat(formatC(as.vector(t(m))+0.0, digits=17, width=1, format='g'), sep='\\n')";
+  const std::string script = "m <- as.matrix(" + expression +
+                             "); cat(nrow(m), ncol(m), '\\n'); cat(formatC(as.vector(t(m))+0.0, "
+                             "digits=17, width=1, format='g'), sep='\\n')";
   std::string quoted;
   for (const char c : script) quoted += c == '\'' ? std::string("'\\''") : std::string(1, c);
   const std::string command = "Rscript --vanilla -e '" + quoted + "' 2>&1";
