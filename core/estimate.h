@@ -57,7 +57,9 @@ enum class Severity { usual = 0, unusual = 1, severe = 2 };
 struct Flag {
   Index horizon = 0;
   double distance = 0;
-  double p_value = 0;
+  double p_value = 0;        // combined: joint and channel tests together; what the rates judge
+  double joint_p_value = 0;  // of the distance: mixed F, then the running fit
+  double rank_p_value = 0;   // share of past distances at least as large, (1 + #)/(K + 1)
   Severity severity = Severity::usual;
   std::vector<ChannelBlame> channels;  // largest |residual| first, at most 5
 };

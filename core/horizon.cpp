@@ -17,7 +17,7 @@ constexpr double kFirstNu = 5;
 // A joint maximum is reached when ln nu moves less than this.
 constexpr double kJointTolerance = 1e-9;
 // Channels named in a flag.
-constexpr std::size_t kNamed = 5;
+constexpr Index kNamed = 5;
 
 TrackerSettings tracker_settings(const PanelSettings& panel, const HorizonSettings& settings) {
   TrackerSettings t;
@@ -36,7 +36,7 @@ double first_nu(const PanelSettings& panel) {
 
 Horizon::Horizon(const PanelSettings& panel, const HorizonSettings& settings)
     : nu_settings_(panel.nu),
-      flag_settings_(panel.flags),
+      flags_(panel.channels, {panel.flags.rate, panel.flags.severe_rate, 0}),
       centre_(panel.centre),
       p_(panel.channels),
       exact_(settings.tolerance && *settings.tolerance <= 1e-6),
@@ -44,8 +44,7 @@ Horizon::Horizon(const PanelSettings& panel, const HorizonSettings& settings)
       workspace_(tracker_.view_mass().size()),
       centred_(panel.channels),
       q_(panel.channels),
-      diagonal_(panel.channels),
-      sample_(panel.channels) {
+      diagonal_(panel.channels) {
   estimate_.nu = estimate_.nu_low = estimate_.nu_high = kNaN;
   estimate_.nu_fit = estimate_.covariance_factor = estimate_.log_volatility = kNaN;
   estimate_.residual = estimate_.distance = estimate_.p_value = estimate_.condition = kNaN;
@@ -61,38 +60,42 @@ bool Horizon::push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time
   estimate_.p_value =
       has_nu_ ? student::tail_probability(estimate_.distance, static_cast<double>(p_), nu_.nu)
               : kNaN;
-  const bool flagged = estimate_.p_value < flag_settings_.rate;
-  if (flagged) fill_flag(x, flag);
+  const bool flagged = has_nu_ && std::isfinite(estimate_.distance) && score(x, flag);
   tracker_.absorb();
   ++since_nu_;
-  if (tracker_.tracking() && tracker_.health().iterations > 0) refresh_nu();
+  if (tracker_.tracking()) {
+    if (tracker_.health().iterations > 0) {
+      refresh_nu();
+    } else if (since_nu_ >= tracker_.health().samples_effective / 2) {
+      tracker_.refresh_view();
+      refresh_nu();
+    }
+  }
   publish();
   return flagged;
 }
 
-void Horizon::fill_flag(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag) {
+// Scores the sample of the last predict(); fills the flag and returns true when it is rare.
+bool Horizon::score(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag) {
+  tracker_.residuals(q_, diagonal_);
+  const detect::ScoredSample sample{estimate_.distance, centred_, q_, diagonal_, nullptr};
+  const detect::ScatterKnowledge known{tracker_.health().samples_effective, nu_.nu,
+                                       centre_.kind == CentreKind::estimated};
+  const bool stale = repeats_.stale(x);
+  const detect::FlagScore score = flags_.score(sample, known, !stale);
+  if (score.level == detect::FlagLevel::usual) return false;
   flag.distance = estimate_.distance;
-  flag.p_value = estimate_.p_value;
-  flag.severity =
-      estimate_.p_value < flag_settings_.severe_rate ? Severity::severe : Severity::unusual;
-  tracker_.score(centred_, q_, diagonal_);
-  const double dof = nu_.nu + static_cast<double>(p_ - 1);
-  for (Index j = 0; j < p_; ++j) {
-    ChannelBlame blame;
-    blame.channel = j;
-    blame.value = x(j);
-    blame.residual = q_(j) / std::sqrt(diagonal_(j));
-    blame.share = centred_(j) * q_(j);
-    const double rest = std::max(flag.distance - blame.residual * blame.residual, 0.);
-    blame.p_value =
-        student::two_sided_t_probability(blame.residual * std::sqrt(dof / (nu_.nu + rest)), dof);
-    flag.channels.push_back(blame);
+  flag.p_value = score.combined;
+  flag.joint_p_value = score.joint;
+  flag.rank_p_value = score.rank;
+  flag.severity = score.level == detect::FlagLevel::severe ? Severity::severe : Severity::unusual;
+  tracker_.centred(centred_);
+  flags_.attribute(sample, known, kNamed, parts_);
+  for (const detect::ChannelPart& part : parts_) {
+    flag.channels.push_back(
+        {part.channel, x(part.channel), part.residual, part.share, part.p_value});
   }
-  std::stable_sort(flag.channels.begin(), flag.channels.end(),
-                   [](const ChannelBlame& a, const ChannelBlame& b) {
-                     return std::abs(a.residual) > std::abs(b.residual);
-                   });
-  if (flag.channels.size() > kNamed) flag.channels.resize(kNamed);
+  return true;
 }
 
 void Horizon::refresh_nu() {
@@ -208,7 +211,7 @@ void Horizon::publish() {
   estimate_.nu = nu_.nu;
   estimate_.nu_low = nu_.nu_low;
   estimate_.nu_high = nu_.nu_high;
-  estimate_.nu_fit = tracker_.view_nu();
+  estimate_.nu_fit = tracker_.fit_nu();
   estimate_.covariance_factor = nu_.nu > 2 ? nu_.nu / (nu_.nu - 2) : kNaN;
   estimate_.log_volatility = health.log_det / (2 * static_cast<double>(p_));
   estimate_.residual = health.residual;

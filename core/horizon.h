@@ -7,7 +7,10 @@
 
 #include <Eigen/Core>
 #include <cstdint>
+#include <vector>
 
+#include "core/detect/alerts.h"
+#include "core/detect/flags.h"
 #include "core/estimate.h"
 #include "core/scatter/tracker.h"
 #include "core/settings.h"
@@ -29,14 +32,15 @@ class Horizon {
   const TrackerHealth& health() const { return tracker_.health(); }
 
  private:
-  void fill_flag(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag);
+  bool score(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag);
   void refresh_nu();
   tail::NuEstimate nu_from_view();
   void converge_jointly();
   void publish();
 
   NuSettings nu_settings_;
-  FlagSettings flag_settings_;
+  detect::Flags flags_;
+  detect::RepeatScreen repeats_;
   CentreSettings centre_;
   Index p_;
   bool exact_;
@@ -46,7 +50,8 @@ class Horizon {
   double since_nu_ = 0;  // samples since nu was refreshed
   tail::Workspace workspace_;
   Estimate estimate_;
-  Eigen::VectorXd centred_, q_, diagonal_, sample_;
+  Eigen::VectorXd centred_, q_, diagonal_;
+  std::vector<detect::ChannelPart> parts_;
 };
 
 }  // namespace tailweir

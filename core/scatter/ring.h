@@ -2,11 +2,11 @@
 // circle.
 //
 // A slot keeps the sample as the tracker uses it (scaled, offset, lifted, padded), its mass omega,
-// its time and two weights: the one it was added with and the one the polish under way has found.
-// Departed samples stay readable until their slot is written again (`slack` slots more than are in
-// use), which is what lets a polish run over many samples' time. Positions are absolute: the k-th
-// sample ever appended is k. Grows (allocates) only when a time-based memory outgrows it. Thread
-// rule: one owner.
+// its time, its distance and two weights: the one it was added with and the one the polish under
+// way has found. Departed samples stay readable until their slot is written again (`slack` slots
+// more than are in use), which is what lets a polish run over many samples' time. Positions are
+// absolute: the k-th sample ever appended is k. Grows (allocates) only when a time-based memory
+// outgrows it. Thread rule: one owner.
 #pragma once
 
 #include <cassert>
@@ -46,6 +46,9 @@ class SampleRing {
   // which: 0 or 1, the two weights.
   double& weight(std::int64_t position, int which) { return weight_[which][at(position)]; }
   double weight(std::int64_t position, int which) const { return weight_[which][at(position)]; }
+  // Squared distance at the fit that last saw the sample.
+  double& distance(std::int64_t position) { return distance_[at(position)]; }
+  double distance(std::int64_t position) const { return distance_[at(position)]; }
   std::int64_t& time(std::int64_t position) { return time_[at(position)]; }
   std::int64_t time(std::int64_t position) const { return time_[at(position)]; }
 
@@ -57,7 +60,7 @@ class SampleRing {
 
   template <typename Archive>
   void archive(Archive& a) {
-    a(rows_, slack_, capacity_, begin_, end_, x_, omega_, weight_[0], weight_[1], time_);
+    a(rows_, slack_, capacity_, begin_, end_, x_, omega_, weight_[0], weight_[1], distance_, time_);
   }
 
  private:
@@ -71,6 +74,7 @@ class SampleRing {
     omega_.assign(n, 0.0);
     weight_[0].assign(n, 0.0);
     weight_[1].assign(n, 0.0);
+    distance_.assign(n, 0.0);
     time_.assign(n, 0);
   }
 
@@ -85,6 +89,7 @@ class SampleRing {
       bigger.omega(k) = omega(k);
       bigger.weight(k, 0) = weight(k, 0);
       bigger.weight(k, 1) = weight(k, 1);
+      bigger.distance(k) = distance(k);
       bigger.time(k) = time(k);
     }
     *this = std::move(bigger);
@@ -92,7 +97,7 @@ class SampleRing {
 
   Index rows_ = 0, slack_ = 0, capacity_ = 0;
   std::int64_t begin_ = 0, end_ = 0;
-  std::vector<double> x_, omega_, weight_[2];
+  std::vector<double> x_, omega_, weight_[2], distance_;
   std::vector<std::int64_t> time_;
 };
 

@@ -85,7 +85,8 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
       unit_(Eigen::VectorXd::Ones(p_)),
       polish_(dimension_, lift_),
       scratch_(dimension_, dimension_),
-      block_(p_, p_) {
+      block_(p_, p_),
+      column_(p_, 1) {
   assert(nu > static_cast<double>(lift_));
   const std::size_t padded = static_cast<std::size_t>(precision_.padded());
   x_.assign(padded, 0);
@@ -326,6 +327,7 @@ void Tracker::enter() {
     return;
   }
   ring_.weight(position, current_) = w;
+  ring_.distance(position) = std::max((p + nu) / u - nu - static_cast<double>(lift_), 0.);
   precision_.add(-a / (1 + gain), y_.data());
   log_det_ += std::log1p(gain);
   total_ += a;
@@ -575,7 +577,9 @@ void Tracker::polish_if_due() {
   }
   health_.samples_effective = mass_ * mass_ / mass_square_;
   const double n = health_.samples_effective;
-  const bool due = exact() || static_cast<double>(health_.since_polish) >= n ||
+  // While the memory still fills, five polishes a doubling keep up with it.
+  const double interval = departing_ > 0 || is_half_life(settings_.memory.kind) ? n : n / 5;
+  const bool due = exact() || static_cast<double>(health_.since_polish) >= interval ||
                    gauge_.estimate(n, health_.since_polish) > tolerance();
   if (!due) return;
   retire_tail();
@@ -642,26 +646,39 @@ void Tracker::adopt() {
   good_total_ = total_;
   good_offset_ = offset_;
   good_unit_ = unit_;
-  // What the iteration left per sample.
-  const Index n = static_cast<Index>(polish_.last() - polish_.first());
+  // What the iteration left per sample; those that left meanwhile are nobody's business any more.
+  fit_nu_ = polish_.from().nu + static_cast<double>(lift_);
+  const double p = static_cast<double>(p_);
+  for (std::int64_t k = std::max(polish_.first(), ring_.begin()); k < polish_.last(); ++k) {
+    ring_.distance(k) = std::max((p + fit_nu_) / ring_.weight(k, current_) - fit_nu_, 0.);
+  }
+  fill_view(fit_nu_);
+}
+
+void Tracker::fill_view(double nu) {
+  const Index n = ring_.size();
   if (view_mass_.size() < n) {
     view_mass_.resize(2 * n);
     view_weight_.resize(2 * n);
     view_distance_.resize(2 * n);
   }
   view_size_ = n;
-  view_first_ = polish_.first();
-  view_nu_ = polish_.from().nu + static_cast<double>(lift_);
+  view_first_ = ring_.begin();
+  view_nu_ = nu;
+  const double p = static_cast<double>(p_);
   double sum = 0;
   for (Index k = 0; k < n; ++k) {
     const std::int64_t position = view_first_ + k;
     view_mass_(k) = ring_.omega(position);
     sum += view_mass_(k);
-    const double u = ring_.weight(position, current_);
-    view_weight_(k) = u;
-    view_distance_(k) = std::max((static_cast<double>(p_) + view_nu_) / u - view_nu_, 0.);
+    view_distance_(k) = ring_.distance(position);
+    view_weight_(k) = (p + nu) / (nu + view_distance_(k));
   }
   view_mass_.head(n) /= sum;
+}
+
+void Tracker::refresh_view() {
+  if (tracking()) fill_view(nu_);
 }
 
 void Tracker::update_health() {
@@ -696,25 +713,26 @@ void Tracker::view_sample(Index k, Eigen::Ref<Eigen::VectorXd> x) const {
   x = scaled.cwiseProduct(unit_) + offset_;
 }
 
-void Tracker::score(Eigen::Ref<Eigen::VectorXd> centred, Eigen::Ref<Eigen::VectorXd> q,
-                    Eigen::Ref<Eigen::VectorXd> precision_diagonal) {
+void Tracker::residuals(Eigen::Ref<Eigen::VectorXd> q,
+                        Eigen::Ref<Eigen::VectorXd> precision_diagonal) const {
   assert(tracking());
   for (Index j = 0; j < p_; ++j) {
-    const std::size_t i = static_cast<std::size_t>(j);
-    centred(j) = x_[i] * unit_(j) / shrink_;
-    q(j) = total_ * y_[i] / (unit_(j) * shrink_);
+    q(j) = total_ * y_[static_cast<std::size_t>(j)] / (unit_(j) * shrink_);
     precision_diagonal(j) = total_ * precision_.entry(j, j) / (unit_(j) * unit_(j));
   }
+}
+
+void Tracker::centred(Eigen::Ref<Eigen::VectorXd> x) const {
+  for (Index j = 0; j < p_; ++j) x(j) = x_[static_cast<std::size_t>(j)] * unit_(j) / shrink_;
   if (lift_ == 0) return;
   // m - offset = -S (W P e_p): one solve with the leading block.
   precision_.copy_to(scratch_);
-  const Eigen::VectorXd last = scratch_.row(p_).head(p_).transpose();
   block_ = scratch_.topLeftCorner(p_, p_);
   if (!spd::cholesky(block_)) return;
-  Eigen::MatrixXd m = -last;
-  spd::solve(block_, m);
-  spd::solve_transposed(block_, m);
-  centred -= unit_.cwiseProduct(m.col(0));
+  column_ = -scratch_.row(p_).head(p_).transpose();
+  spd::solve(block_, column_);
+  spd::solve_transposed(block_, column_);
+  x -= unit_.cwiseProduct(column_.col(0));
 }
 
 bool Tracker::scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const {

@@ -80,22 +80,29 @@ class Tracker {
   // One more whole iteration now (joint estimation of nu asks for it). False when it failed.
   bool polish_now();
 
-  // After an absorb() or polish_now() that finished an iteration (health().iterations > 0), what it
-  // left per sample, oldest first: mass (sum 1), weight u and distance at the fixed point.
+  // What is known per sample of the ring, oldest first: mass (sum 1), weight u and distance. After
+  // an absorb() or polish_now() that finished an iteration (health().iterations > 0) as it left
+  // them; refresh_view() brings the samples since up to date from what they had when they entered,
+  // O(n).
+  void refresh_view();
   Index view_size() const { return view_size_; }
   const Eigen::ArrayXd& view_mass() const { return view_mass_; }
   const Eigen::ArrayXd& view_weight() const { return view_weight_; }
   const Eigen::ArrayXd& view_distance() const { return view_distance_; }
   double view_nu() const { return view_nu_; }
+  // nu of the last finished iteration: the one the scatter is the fixed point of.
+  double fit_nu() const { return fit_nu_; }
   // Share of M that is in the ring (the rest is the frozen tail).
   double ring_share() const;
   // Sample k of the view in the channels' units.
   void view_sample(Index k, Eigen::Ref<Eigen::VectorXd> x) const;
 
-  // For the sample of the last predict(): x - m (p), S^-1 (x - m) (p), and diag(S^-1) (p), before
-  // it was absorbed. Valid between predict() and absorb(). Preconditions: tracking().
-  void score(Eigen::Ref<Eigen::VectorXd> centred, Eigen::Ref<Eigen::VectorXd> q,
-             Eigen::Ref<Eigen::VectorXd> precision_diagonal);
+  // For the sample of the last predict(), before it is absorbed: S^-1 (x - m) (p) and diag(S^-1)
+  // (p), channels' units. O(p). Precondition: tracking(). Valid between predict() and absorb().
+  void residuals(Eigen::Ref<Eigen::VectorXd> q,
+                 Eigen::Ref<Eigen::VectorXd> precision_diagonal) const;
+  // The same sample's x - m (p). O(p^3/6) with an estimated centre, O(p) otherwise.
+  void centred(Eigen::Ref<Eigen::VectorXd> x) const;
 
   // Current S (p x p, whole) and m (p), channels' units; the last good ones when not tracking().
   // False, both untouched, when there are none or they do not factorise. p^3/2 multiply-adds.
@@ -121,6 +128,7 @@ class Tracker {
   void fail(TrackerState state);
   void polish_if_due();
   bool iterate();
+  void fill_view(double nu);
   void adopt();
   void update_health();
   double unequal_masses() const;
@@ -165,11 +173,11 @@ class Tracker {
   Gauge gauge_;
   double contraction_ = .3;  // what a repeated iteration leaves of the distance, learned
   double after_ = 0;         // distance thought left by the last iteration
-  mutable Eigen::MatrixXd scratch_, block_;
+  mutable Eigen::MatrixXd scratch_, block_, column_;
   Eigen::MatrixXd columns_;
   Index view_size_ = 0;
   std::int64_t view_first_ = 0;
-  double view_nu_ = 0;
+  double view_nu_ = 0, fit_nu_ = 0;
   Eigen::ArrayXd view_mass_, view_weight_, view_distance_;
 
   Eigen::MatrixXd good_;  // P of the last polish, lower, with its W, offset and units

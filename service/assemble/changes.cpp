@@ -1,9 +1,19 @@
 #include "service/assemble/changes.h"
 
 #include <cmath>
+#include <cstdio>
 #include <limits>
 
 namespace tailweir {
+namespace {
+
+std::string shown(double value) {
+  char text[32];
+  std::snprintf(text, sizeof text, "%g", value);
+  return text;
+}
+
+}  // namespace
 
 Changes::Changes(const std::vector<ChannelSettings>& channels)
     : channels_(channels), base_(channels.size(), std::numeric_limits<double>::quiet_NaN()) {}
@@ -20,7 +30,7 @@ Result<std::vector<double>> Changes::look(const std::vector<double>& values) con
       continue;
     }
     if (channel.step == Step::log_difference && !(x > 0)) {
-      return Fault{channel.name, "level " + std::to_string(x) + " has no logarithm",
+      return Fault{channel.name, "level " + shown(x) + " has no logarithm",
                    "a level above 0 for step log_difference"};
     }
     if (channel.step == Step::relative_difference && x == 0) {

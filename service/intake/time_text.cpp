@@ -1,147 +1,131 @@
 #include "service/intake/time_text.h"
 
-#include <array>
 #include <charconv>
+#include <chrono>
 
 namespace tailweir {
 namespace {
 
-constexpr std::int64_t kSecond = 1000000000;
+constexpr std::int64_t kSecond = 1'000'000'000;
+constexpr std::int64_t kDay = 86'400 * kSecond;
+constexpr const char* kAllowed =
+    "write 2026-03-01T09:30:00Z, 2026-03-01, or whole nanoseconds since 1970";
 
-// Days from 1970-01-01 in the proleptic Gregorian calendar (years counted from March).
-std::int64_t days_from_date(std::int64_t year, int month, int day) {
-  year -= month <= 2;
-  const std::int64_t era = (year >= 0 ? year : year - 399) / 400;
-  const std::int64_t of_era = year - era * 400;
-  const std::int64_t of_year = (153 * (month + (month > 2 ? -3 : 9)) + 2) / 5 + day - 1;
-  const std::int64_t days = of_era * 365 + of_era / 4 - of_era / 100 + of_year;
-  return era * 146097 + days - 719468;
-}
+Fault bad_time(std::string what) { return {"", std::move(what), kAllowed}; }
 
-void date_from_days(std::int64_t days, std::int64_t& year, int& month, int& day) {
-  days += 719468;
-  const std::int64_t era = (days >= 0 ? days : days - 146096) / 146097;
-  const std::int64_t of_era = days - era * 146097;
-  const std::int64_t years = (of_era - of_era / 1460 + of_era / 36524 - of_era / 146096) / 365;
-  const std::int64_t of_year = of_era - (365 * years + years / 4 - years / 100);
-  const std::int64_t shifted = (5 * of_year + 2) / 153;
-  day = static_cast<int>(of_year - (153 * shifted + 2) / 5 + 1);
-  month = static_cast<int>(shifted < 10 ? shifted + 3 : shifted - 9);
-  year = years + era * 400 + (month <= 2);
-}
-
-// Takes exactly `width` digits from the front.
-bool take_digits(std::string_view& text, int width, int& value) {
-  if (text.size() < static_cast<std::size_t>(width)) return false;
-  value = 0;
-  for (int k = 0; k < width; ++k) {
-    const char c = text[static_cast<std::size_t>(k)];
-    if (c < '0' || c > '9') return false;
-    value = value * 10 + (c - '0');
+// Reads exactly `count` digits at text[at]; -1 when they are not all there.
+int digits(std::string_view text, std::size_t at, std::size_t count) {
+  if (at + count > text.size()) return -1;
+  int value = 0;
+  for (std::size_t i = at; i < at + count; ++i) {
+    if (text[i] < '0' || text[i] > '9') return -1;
+    value = 10 * value + (text[i] - '0');
   }
-  text.remove_prefix(static_cast<std::size_t>(width));
-  return true;
+  return value;
 }
 
-bool take(std::string_view& text, char c) {
-  if (text.empty() || text.front() != c) return false;
-  text.remove_prefix(1);
-  return true;
+bool is_integer(std::string_view text) {
+  const std::size_t start = !text.empty() && text[0] == '-' ? 1 : 0;
+  return text.size() > start && text.find_first_not_of("0123456789", start) == text.npos;
 }
 
-int days_in_month(int year, int month) {
-  constexpr std::array<int, 12> kDays = {31, 28, 31, 30, 31, 30, 31, 31, 30, 31, 30, 31};
-  const bool leap = (year % 4 == 0 && year % 100 != 0) || year % 400 == 0;
-  return month == 2 && leap ? 29 : kDays[static_cast<std::size_t>(month - 1)];
+Result<std::int64_t> parse_date(std::string_view text) {
+  const int year = digits(text, 0, 4), month = digits(text, 5, 2), day = digits(text, 8, 2);
+  if (year < 0 || month < 0 || day < 0 || text[4] != '-' || text[7] != '-') {
+    return bad_time("is not a time");
+  }
+  const std::chrono::year_month_day date{std::chrono::year(year),
+                                         std::chrono::month(static_cast<unsigned>(month)),
+                                         std::chrono::day(static_cast<unsigned>(day))};
+  if (!date.ok()) return bad_time("is a date that does not exist");
+  if (year < 1678 || year > 2261) return bad_time("lies outside the years 1678 to 2261");
+  return std::chrono::sys_days(date).time_since_epoch().count() * kDay;
 }
 
-std::optional<std::int64_t> parse_clock(std::string_view text, std::int64_t days) {
-  int hour = 0, minute = 0, second = 0;
-  if (!take_digits(text, 2, hour) || !take(text, ':') || !take_digits(text, 2, minute)) return {};
-  if (take(text, ':') && !take_digits(text, 2, second)) return {};
-  if (hour > 23 || minute > 59 || second > 60) return {};
-  std::int64_t fraction = 0;
-  if (take(text, '.')) {
-    std::int64_t unit = kSecond;
-    if (text.empty() || text.front() < '0' || text.front() > '9') return {};
-    while (!text.empty() && text.front() >= '0' && text.front() <= '9') {
-      unit /= 10;
-      fraction += unit * (text.front() - '0');
-      text.remove_prefix(1);
+// The part behind the seconds: fraction, then zone. Returns nanoseconds to add.
+Result<std::int64_t> parse_fraction_and_zone(std::string_view rest) {
+  std::int64_t nanoseconds = 0;
+  if (!rest.empty() && rest[0] == '.') {
+    std::size_t used = 1;
+    std::int64_t unit = kSecond / 10;
+    for (; used < rest.size() && rest[used] >= '0' && rest[used] <= '9'; ++used, unit /= 10) {
+      if (unit == 0 && rest[used] != '0') return bad_time("is finer than a nanosecond");
+      nanoseconds += unit * (rest[used] - '0');
     }
+    if (used == 1) return bad_time("has no digits behind the point");
+    rest.remove_prefix(used);
   }
-  std::int64_t offset = 0;
-  if (!text.empty() && (text == "Z" || text == "z")) {
-    text.remove_prefix(1);
-  } else {
-    const bool plus = take(text, '+');
-    if (!plus && !take(text, '-')) return {};
-    int hours = 0, minutes = 0;
-    if (!take_digits(text, 2, hours) || !take(text, ':') || !take_digits(text, 2, minutes))
-      return {};
-    if (hours > 23 || minutes > 59) return {};
-    offset = (plus ? 1 : -1) * (hours * 3600 + minutes * 60);
+  if (rest == "Z" || rest == "z") return nanoseconds;
+  if (rest.empty()) return bad_time("has no time zone: end it with Z or an offset such as +02:00");
+  const int hours = digits(rest, 1, 2), minutes = digits(rest, 4, 2);
+  if (rest.size() != 6 || (rest[0] != '+' && rest[0] != '-') || rest[3] != ':' || hours < 0 ||
+      hours > 23 || minutes < 0 || minutes > 59) {
+    return bad_time("has a time zone that is neither Z nor an offset such as +02:00");
   }
-  if (!text.empty()) return {};
-  return ((days * 86400 + hour * 3600 + minute * 60 + second) - offset) * kSecond + fraction;
+  const std::int64_t offset = (hours * 60 + minutes) * 60 * kSecond;
+  return rest[0] == '+' ? nanoseconds - offset : nanoseconds + offset;
 }
 
 }  // namespace
 
+Result<std::int64_t> read_time(std::string_view text) {
+  if (is_integer(text)) {
+    std::int64_t value = 0;
+    if (std::from_chars(text.data(), text.data() + text.size(), value).ec != std::errc()) {
+      return bad_time("is more nanoseconds than 64 bits hold");
+    }
+    return value;
+  }
+  if (text.size() < 10) return bad_time("is not a time");
+  Result<std::int64_t> date = parse_date(text.substr(0, 10));
+  if (!date || text.size() == 10) return date;
+  const int hour = digits(text, 11, 2), minute = digits(text, 14, 2), second = digits(text, 17, 2);
+  if ((text[10] != 'T' && text[10] != 't' && text[10] != ' ') || hour < 0 || minute < 0 ||
+      second < 0 || text[13] != ':' || text[16] != ':') {
+    return bad_time("is not a time");
+  }
+  if (hour > 23 || minute > 59 || second > 60 || (second == 60 && minute != 59)) {
+    return bad_time("is a time of day that does not exist");
+  }
+  Result<std::int64_t> rest = parse_fraction_and_zone(text.substr(19));
+  if (!rest) return rest;
+  return date.value() + ((hour * 60 + minute) * 60 + second) * kSecond + rest.value();
+}
+
 std::optional<std::int64_t> parse_time(std::string_view text) {
-  std::int64_t integer = 0;
-  const auto [end, error] = std::from_chars(text.data(), text.data() + text.size(), integer);
-  if (error == std::errc() && end == text.data() + text.size()) return integer;
-  int year = 0, month = 0, day = 0;
-  if (!take_digits(text, 4, year) || !take(text, '-') || !take_digits(text, 2, month) ||
-      !take(text, '-') || !take_digits(text, 2, day)) {
-    return {};
-  }
-  if (year < 1678 || year > 2261 || month < 1 || month > 12 || day < 1 ||
-      day > days_in_month(year, month)) {
-    return {};
-  }
-  const std::int64_t days = days_from_date(year, month, day);
-  if (text.empty()) return days * 86400 * kSecond;
-  if (!take(text, 'T') && !take(text, 't') && !take(text, ' ')) return {};
-  return parse_clock(text, days);
+  const Result<std::int64_t> time = read_time(text);
+  return time ? std::optional<std::int64_t>(time.value()) : std::nullopt;
 }
 
 void append_time(std::string& text, std::int64_t time_ns) {
-  std::int64_t seconds = time_ns / kSecond;
-  std::int64_t fraction = time_ns % kSecond;
-  if (fraction < 0) {
-    fraction += kSecond;
-    --seconds;
+  constexpr std::size_t kLength = 30;
+  text.resize(text.size() + kLength);
+  char* out = text.data() + text.size() - kLength;
+  std::int64_t day = time_ns / kDay, rest = time_ns % kDay;
+  if (rest < 0) {
+    rest += kDay;
+    --day;
   }
-  std::int64_t days = seconds / 86400;
-  std::int64_t left = seconds % 86400;
-  if (left < 0) {
-    left += 86400;
-    --days;
-  }
-  std::int64_t year = 0;
-  int month = 0, day = 0;
-  date_from_days(days, year, month, day);
-  const auto digits = [&](std::int64_t value, int width) {
-    std::int64_t unit = 1;
-    for (int k = 1; k < width; ++k) unit *= 10;
-    for (; unit > 0; unit /= 10) text += static_cast<char>('0' + value / unit % 10);
+  const std::chrono::year_month_day date{
+      std::chrono::sys_days(std::chrono::days(static_cast<int>(day)))};
+  const auto put = [&out](std::int64_t value, int count) {
+    for (int i = count - 1; i >= 0; --i, value /= 10) out[i] = static_cast<char>('0' + value % 10);
+    out += count;
   };
-  digits(year, 4);
-  text += '-';
-  digits(month, 2);
-  text += '-';
-  digits(day, 2);
-  text += 'T';
-  digits(left / 3600, 2);
-  text += ':';
-  digits(left / 60 % 60, 2);
-  text += ':';
-  digits(left % 60, 2);
-  text += '.';
-  digits(fraction, 9);
-  text += 'Z';
+  put(static_cast<int>(date.year()), 4);
+  *out++ = '-';
+  put(static_cast<unsigned>(date.month()), 2);
+  *out++ = '-';
+  put(static_cast<unsigned>(date.day()), 2);
+  *out++ = 'T';
+  put(rest / (3600 * kSecond), 2);
+  *out++ = ':';
+  put(rest / (60 * kSecond) % 60, 2);
+  *out++ = ':';
+  put(rest / kSecond % 60, 2);
+  *out++ = '.';
+  put(rest % kSecond, 9);
+  *out++ = 'Z';
 }
 
 std::string format_time(std::int64_t time_ns) {

@@ -1,11 +1,84 @@
 #include "service/report/record_lines.h"
 
+#include <algorithm>
+#include <cassert>
 #include <charconv>
 #include <cmath>
 
 #include "service/intake/time_text.h"
+#include "service/settings/names.h"
 
 namespace tailweir {
+namespace {
+
+std::string json_text(const std::string& text) {
+  constexpr const char* kHex = "0123456789abcdef";
+  std::string out = "\"";
+  for (const char c : text) {
+    const auto byte = static_cast<unsigned char>(c);
+    if (byte < 0x20) {
+      out += "\\u00";
+      out += kHex[byte >> 4];
+      out += kHex[byte & 15];
+    } else {
+      if (c == '"' || c == '\\') out += '\\';
+      out += c;
+    }
+  }
+  return out + '"';
+}
+
+template <typename Number>
+void put_whole(Number value, std::string& out) {
+  char text[24];
+  out.append(text, std::to_chars(text, text + sizeof text, value).ptr);
+}
+
+void put(double value, std::string& out) {
+  if (!std::isfinite(value)) {
+    out += "null";
+    return;
+  }
+  char text[32];
+  out.append(text, std::to_chars(text, text + sizeof text, value).ptr);
+}
+
+void put(const char* key, double value, std::string& out) {
+  out += key;
+  put(value, out);
+}
+
+void put_word(const char* key, const char* word, std::string& out) {
+  out += key;
+  out += '"';
+  out += word;
+  out += '"';
+}
+
+void put_array(const char* key, const std::vector<double>& values, bool shown, std::string& out) {
+  out += key;
+  if (!shown || values.empty()) {
+    out += "null";
+    return;
+  }
+  char mark = '[';
+  for (const double value : values) {
+    out += mark;
+    put(value, out);
+    mark = ',';
+  }
+  out += ']';
+}
+
+void put_head(std::uint64_t sequence, std::int64_t time_ns, std::string& out) {
+  out += "{\"sequence\":";
+  put_whole(sequence, out);
+  out += ",\"time\":\"";
+  append_time(out, time_ns);
+  out += '"';
+}
+
+}  // namespace
 
 const char* name_of(HorizonState state) {
   switch (state) {
@@ -67,115 +140,131 @@ const char* name_of(Severity severity) {
   return "unknown";
 }
 
-void append_number(std::string& text, double value) {
-  if (!std::isfinite(value)) {
-    text += "null";
-    return;
+Result<MatricesPolicy> parse_matrices_policy(const std::string& text) {
+  MatricesPolicy policy;
+  if (text == "every") return policy;
+  if (text == "never") {
+    policy.kind = MatricesPolicy::Kind::never;
+    return policy;
   }
-  char buffer[40];
-  const auto [end, error] = std::to_chars(buffer, buffer + sizeof buffer, value);
-  text.append(buffer, end);
-}
-
-RecordLines::RecordLines(std::vector<PanelDescription> descriptions, MatricesPolicy matrices)
-    : descriptions_(std::move(descriptions)), matrices_(matrices) {}
-
-void RecordLines::begin(std::uint64_t sequence, std::int64_t time_ns, std::uint32_t panel,
-                        std::uint32_t horizon) {
-  text_.clear();
-  text_ += "{\"sequence\":" + std::to_string(sequence) + ",\"time\":\"";
-  append_time(text_, time_ns);
-  text_ += "\",\"panel\":\"" + descriptions_[panel].name + "\",\"horizon\":\"" +
-           descriptions_[panel].horizons[horizon] + "\"";
-}
-
-void RecordLines::field(const char* name, double value) {
-  text_ += ",\"";
-  text_ += name;
-  text_ += "\":";
-  append_number(text_, value);
-}
-
-void RecordLines::field(const char* name, const char* word) {
-  text_ += ",\"";
-  text_ += name;
-  text_ += "\":\"";
-  text_ += word;
-  text_ += '"';
-}
-
-void RecordLines::list(const char* name, const std::vector<double>& values) {
-  text_ += ",\"";
-  text_ += name;
-  if (values.empty()) {
-    text_ += "\":null";
-    return;
+  if (text == "flagged" || text == "alerts") {
+    policy.kind = MatricesPolicy::Kind::flagged;
+    return policy;
   }
-  text_ += "\":[";
-  for (std::size_t k = 0; k < values.size(); ++k) {
-    if (k > 0) text_ += ',';
-    append_number(text_, values[k]);
+  const char* end = text.data() + text.size();
+  const auto [stop, error] = std::from_chars(text.data(), end, policy.every);
+  if (error == std::errc() && stop == end && policy.every > 0) return policy;
+  return Fault{"--matrices", quoted(text) + " is no choice",
+               "write every, a whole number, flagged or never"};
+}
+
+RecordLines::RecordLines(const std::vector<PanelDescription>& descriptions, MatricesPolicy matrices)
+    : matrices_(matrices) {
+  for (const PanelDescription& description : descriptions) {
+    Pieces pieces;
+    for (const std::string& horizon : description.horizons) {
+      pieces.panel_and_horizon.push_back(",\"panel\":" + json_text(description.name) +
+                                         ",\"horizon\":" + json_text(horizon));
+    }
+    for (const std::string& channel : description.channels) {
+      pieces.channel.push_back(json_text(channel));
+    }
+    pieces_.push_back(std::move(pieces));
   }
-  text_ += ']';
 }
 
-const std::string& RecordLines::line(const Record& record) {
-  if (const EstimateRecord* estimate = std::get_if<EstimateRecord>(&record)) return line(*estimate);
-  return line(*std::get_if<FlagRecord>(&record));
+bool RecordLines::has(std::uint32_t panel, std::uint32_t horizon) const {
+  return panel < pieces_.size() && horizon < pieces_[panel].panel_and_horizon.size();
 }
 
-const std::string& RecordLines::line(const EstimateRecord& record) {
+bool RecordLines::knows(const EstimateRecord& record) const {
+  if (!has(record.panel, record.horizon)) return false;
+  const std::size_t p = pieces_[record.panel].channel.size();
+  return (record.centre.empty() || record.centre.size() == p) &&
+         (record.scatter.empty() || record.scatter.size() == p * (p + 1) / 2);
+}
+
+bool RecordLines::knows(const FlagRecord& record) const {
+  if (!has(record.panel, record.horizon)) return false;
+  const auto p = static_cast<Index>(pieces_[record.panel].channel.size());
+  return std::all_of(
+      record.flag.channels.begin(), record.flag.channels.end(),
+      [p](const ChannelBlame& blame) { return blame.channel >= 0 && blame.channel < p; });
+}
+
+bool RecordLines::knows(const Record& record) const {
+  return std::visit([this](const auto& one) { return knows(one); }, record);
+}
+
+void RecordLines::append(const Record& record, std::string& out) const {
+  if (const auto* estimate = std::get_if<EstimateRecord>(&record)) {
+    append(*estimate, matrices_.wants(estimate->sequence, estimate->flagged), out);
+  } else {
+    append(*std::get_if<FlagRecord>(&record), out);
+  }
+}
+
+void RecordLines::append(const EstimateRecord& record, bool matrices, std::string& out) const {
+  assert(knows(record));
+  const Pieces& pieces = pieces_[record.panel];
   const Estimate& e = record.estimate;
-  begin(record.sequence, record.time_ns, record.panel, record.horizon);
-  field("state", name_of(e.state));
-  field("state_reason", name_of(e.reason));
-  field("channels", static_cast<double>(descriptions_[record.panel].channels.size()));
-  field("channels_version", static_cast<double>(record.channels_version));
-  field("nu", e.nu);
-  field("nu_low", e.nu_low);
-  field("nu_high", e.nu_high);
-  field("nu_status", name_of(e.nu_status));
-  field("nu_fit", e.nu_fit);
-  static const std::vector<double> kNone;
-  const bool matrices = matrices_.wants(record.sequence, record.flagged);
-  list("centre", matrices ? record.centre : kNone);
-  list("scatter", matrices ? record.scatter : kNone);
-  field("covariance_factor", e.covariance_factor);
-  field("samples_effective", e.samples_effective);
-  field("log_volatility", e.log_volatility);
-  field("residual", e.residual);
-  field("iterations", e.iterations);
-  field("since_polish", static_cast<double>(e.since_polish));
-  field("distance", e.distance);
-  field("p_value", e.p_value);
-  field("coverage", e.coverage);
-  field("condition", e.condition);
-  text_ += record.flagged ? ",\"flagged\":true}" : ",\"flagged\":false}";
-  return text_;
+  // Before the first fit nothing about it is defined, whatever the members hold.
+  const double nothing = std::nan("");
+  const bool fitted = e.nu > 0;
+  const auto of_fit = [&](double value) { return fitted ? value : nothing; };
+  put_head(record.sequence, record.time_ns, out);
+  out += pieces.panel_and_horizon[record.horizon];
+  put_word(",\"state\":", name_of(e.state), out);
+  put_word(",\"state_reason\":", name_of(e.reason), out);
+  out += ",\"channels\":";
+  put_whole(pieces.channel.size(), out);
+  out += ",\"channels_version\":";
+  put_whole(record.channels_version, out);
+  put(",\"nu\":", of_fit(e.nu), out);
+  put(",\"nu_low\":", of_fit(e.nu_low), out);
+  put(",\"nu_high\":", of_fit(e.nu_high), out);
+  put_word(",\"nu_status\":", name_of(e.nu_status), out);
+  put(",\"nu_fit\":", of_fit(e.nu_fit), out);
+  put_array(",\"centre\":", record.centre, matrices, out);
+  put_array(",\"scatter\":", record.scatter, matrices, out);
+  put(",\"covariance_factor\":", e.nu > 2 ? e.covariance_factor : nothing, out);
+  put(",\"samples_effective\":", e.samples_effective, out);
+  put(",\"log_volatility\":", of_fit(e.log_volatility), out);
+  put(",\"residual\":", of_fit(e.residual), out);
+  out += ",\"iterations\":";
+  put_whole(e.iterations, out);
+  out += ",\"since_polish\":";
+  put_whole(e.since_polish, out);
+  put(",\"distance\":", of_fit(e.distance), out);
+  put(",\"p_value\":", of_fit(e.p_value), out);
+  put(",\"coverage\":", e.coverage, out);
+  put(",\"condition\":", of_fit(e.condition), out);
+  out += record.flagged ? ",\"flagged\":true}\n" : ",\"flagged\":false}\n";
 }
 
-const std::string& RecordLines::line(const FlagRecord& record) {
-  begin(record.sequence, record.time_ns, record.panel, record.horizon);
-  field("distance", record.flag.distance);
-  field("p_value", record.flag.p_value);
-  field("severity", name_of(record.flag.severity));
-  field("flagged", static_cast<double>(record.flagged));
-  field("flagged_expected", record.flagged_expected);
-  text_ += ",\"channels\":[";
-  bool first = true;
-  for (const ChannelBlame& blame : record.flag.channels) {
-    if (!first) text_ += ',';
-    first = false;
-    text_ += "{\"name\":\"" +
-             descriptions_[record.panel].channels[static_cast<std::size_t>(blame.channel)] + "\"";
-    field("value", blame.value);
-    field("residual", blame.residual);
-    field("share", blame.share);
-    field("p_value", blame.p_value);
-    text_ += '}';
+void RecordLines::append(const FlagRecord& record, std::string& out) const {
+  assert(knows(record));
+  const Pieces& pieces = pieces_[record.panel];
+  put_head(record.sequence, record.time_ns, out);
+  out += pieces.panel_and_horizon[record.horizon];
+  put(",\"distance\":", record.flag.distance, out);
+  put(",\"p_value\":", record.flag.p_value, out);
+  put_word(",\"severity\":", name_of(record.flag.severity), out);
+  out += ",\"flagged\":";
+  put_whole(record.flagged, out);
+  put(",\"flagged_expected\":", record.flagged_expected, out);
+  out += ",\"channels\":[";
+  for (std::size_t i = 0; i < record.flag.channels.size(); ++i) {
+    const ChannelBlame& blame = record.flag.channels[i];
+    out += i == 0 ? "{\"name\":" : ",{\"name\":";
+    out += pieces.channel[static_cast<std::size_t>(blame.channel)];
+    put(",\"value\":", blame.value, out);
+    put(",\"residual\":", blame.residual, out);
+    put(",\"share\":", blame.share, out);
+    put(",\"p_value\":", blame.p_value, out);
+    out += '}';
   }
-  text_ += "]}";
-  return text_;
+  out += "]}\n";
 }
 
 }  // namespace tailweir

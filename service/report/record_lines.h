@@ -1,13 +1,19 @@
-// Records as JSON lines: one writer for replay's files and for tap --json, so that live and
-// replayed lines are the same to the byte.
+// Records as JSON lines: what `replay` writes and `tap --json` prints, the same bytes for the same
+// record.
 //
-// Numbers are the shortest decimal that reads back to the same double; what is not finite is null;
-// times are RFC 3339 in UTC with nanoseconds. Thread rule: one owner.
+//   {"sequence":7,"time":"2026-03-01T09:30:00.000000000Z","panel":"metals","horizon":"slow",...}
+//
+// Numbers are the shortest text that reads back to the same double; what is not defined is null.
+// Fields never change order (docs: service/report/README.md). Written by hand, not through a JSON
+// library: one line per sample and horizon is the hot path. Thread rule: one owner. No I/O.
 #pragma once
 
+#include <cstdint>
 #include <string>
+#include <type_traits>
 #include <vector>
 
+#include "core/result.h"
 #include "service/engine/engine.h"
 #include "service/engine/records.h"
 
@@ -18,27 +24,48 @@ const char* name_of(StateReason reason);
 const char* name_of(tail::NuStatus status);
 const char* name_of(Severity severity);
 
-// Appends the shortest round-trip decimal, or null.
-void append_number(std::string& text, double value);
+// Reads "every", a whole number N > 0, "flagged" (also "alerts", until there are any) or "never".
+Result<MatricesPolicy> parse_matrices_policy(const std::string& text);
 
 class RecordLines {
  public:
   // matrices: which estimate lines carry centre and scatter (null on the others).
-  RecordLines(std::vector<PanelDescription> descriptions, MatricesPolicy matrices);
+  RecordLines(const std::vector<PanelDescription>& descriptions, MatricesPolicy matrices);
 
-  // The record's line without a newline; valid until the next call.
-  const std::string& line(const Record& record);
-  const std::string& line(const EstimateRecord& record);
-  const std::string& line(const FlagRecord& record);
+  // Whether the descriptions have every name the record refers to, and its arrays fit.
+  bool knows(const Record& record) const;
+  bool knows(const EstimateRecord& record) const;
+  bool knows(const FlagRecord& record) const;
+
+  // Appends the line of a record, line feed included. Precondition: knows(record). No allocation
+  // once `out` has room.
+  void append(const Record& record, std::string& out) const;
+  void append(const FlagRecord& record, std::string& out) const;
+  // The same with the policy overruled.
+  void append(const EstimateRecord& record, bool matrices, std::string& out) const;
+
+  // The record's line without its line feed; valid until the next call.
+  template <typename AnyRecord>
+  const std::string& line(const AnyRecord& record) {
+    text_.clear();
+    if constexpr (std::is_same_v<AnyRecord, EstimateRecord>) {
+      append(record, matrices_.wants(record.sequence, record.flagged), text_);
+    } else {
+      append(record, text_);
+    }
+    text_.pop_back();
+    return text_;
+  }
 
  private:
-  void begin(std::uint64_t sequence, std::int64_t time_ns, std::uint32_t panel,
-             std::uint32_t horizon);
-  void field(const char* name, double value);
-  void field(const char* name, const char* word);
-  void list(const char* name, const std::vector<double>& values);
+  // Ready-made pieces of text of one panel.
+  struct Pieces {
+    std::vector<std::string> panel_and_horizon;  // ,"panel":"metals","horizon":"slow"
+    std::vector<std::string> channel;            // "copper"
+  };
+  bool has(std::uint32_t panel, std::uint32_t horizon) const;
 
-  std::vector<PanelDescription> descriptions_;
+  std::vector<Pieces> pieces_;
   MatricesPolicy matrices_;
   std::string text_;
 };

@@ -2,7 +2,7 @@
 //
 // The file format is described in config/README.md; every key there is a member here. Unknown keys,
 // duplicate keys, aliases, wrong types and wrong units are refused as FILE:LINE:COLUMN: what is
-// wrong; what would be right. yaml-cpp is included only by the .cpp. Thread rule: plain values.
+// wrong; what would be right. yaml-cpp is included by document.cpp only. Thread rule: plain values.
 #pragma once
 
 #include <optional>
@@ -56,5 +56,10 @@ struct Settings {
 Result<Settings> load_settings(const std::string& path);
 // The same from text; name stands for the file in messages.
 Result<Settings> parse_settings(const std::string& text, const std::string& name);
+
+// What the settings ask for and this version does not do, as keys ("store",
+// "panels.metals.alerts"): accepted so that one file serves several versions, and said plainly by
+// `check` and `run`.
+std::vector<std::string> not_used(const Settings& settings);
 
 }  // namespace tailweir
