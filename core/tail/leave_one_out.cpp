@@ -29,6 +29,7 @@ bool prepare(const FitView& fit, const NuSettings& settings, Workspace& workspac
   // A sample at the centre has distance 0, whose logarithm is not finite. Ratios up to 1e150 keep
   // the products of sums_equal() finite.
   const double least = std::max(largest * 1e-150, 1e-300);
+  data.log_largest = std::log(largest);
   double square = 0;
   double least_mass = std::numeric_limits<double>::infinity(), most_mass = 0;
   for (Index i = 0; i < n; ++i) {
@@ -51,7 +52,9 @@ bool prepare(const FitView& fit, const NuSettings& settings, Workspace& workspac
 
 NuEstimate degenerate(const NuSettings& settings, const NuEstimate* previous) {
   NuEstimate estimate;
-  estimate.nu = previous != nullptr ? previous->nu : std::sqrt(settings.floor * settings.ceiling);
+  const double nu =
+      previous != nullptr ? previous->nu : std::sqrt(settings.floor * settings.ceiling);
+  estimate.nu = std::clamp(nu, settings.floor, settings.ceiling);
   estimate.unblended = estimate.nu;
   estimate.nu_low = settings.floor;
   estimate.nu_high = settings.ceiling;
@@ -90,6 +93,9 @@ bool blend_applies(const FitView& fit, const ScaledF& data) {
   return p * fit.mass.maxCoeff() <= .3;
 }
 
+// No log posterior that is not a number, and a finite largest one.
+bool usable(const Eigen::ArrayXd& lp) { return !lp.isNaN().any() && std::isfinite(lp.maxCoeff()); }
+
 // The part of the grid around the previous interval, thinned to about 25 points. False when there
 // is no previous interval or the mass runs off that part.
 bool fill_around(const NuEstimate* previous, const ScaledF& data, Eigen::ArrayXd& lp) {
@@ -125,7 +131,7 @@ NuEstimate leave_one_out(const FitView& fit, const NuSettings& settings, Workspa
   if (!fill_around(previous, data, workspace.log_posterior)) {
     fill_whole(data, workspace.log_posterior);
   }
-  if (!std::isfinite(workspace.log_posterior.maxCoeff())) return degenerate(settings, previous);
+  if (!usable(workspace.log_posterior)) return degenerate(settings, previous);
   NuEstimate estimate;
   estimate.effective_channels = data.p;
   summarise(workspace.log_posterior, estimate);
@@ -186,7 +192,7 @@ NuEstimate leave_one_out_censored(const FitView& fit, const NuSettings& settings
   data.mass = workspace.scratch.data();
   data.n = kept;
   fill_whole(data, workspace.log_posterior);
-  if (!std::isfinite(workspace.log_posterior.maxCoeff())) return degenerate(settings, nullptr);
+  if (!usable(workspace.log_posterior)) return degenerate(settings, nullptr);
   NuEstimate estimate;
   estimate.effective_channels = data.p;
   summarise(workspace.log_posterior, estimate);

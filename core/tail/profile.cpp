@@ -34,7 +34,7 @@ struct Sums {
 // Equal masses multiply before they take a logarithm, so that a pass costs one division a distance.
 // Four running sums in a fixed order: faster than one, and the same on every run.
 Sums sums_equal(const ScaledF& data, double inverse_scale) {
-  constexpr double kFlush = 1e50;  // delta/E stays below 1e200, see prepare() in leave_one_out.cpp
+  constexpr double kFlush = 1e50;  // delta/E stays below 1e150, see fill()
   Lanes share{}, slope{}, product{1, 1, 1, 1};
   double logs = 0;
   const auto add = [&](std::size_t lane, double delta) {
@@ -128,9 +128,11 @@ double profile(const ScaledF& data, double nu, double& e) {
       slope += data.above * above.slope / half;
     }
     (miss > 0 ? low : high) = e;
-    const double step = slope > 0 ? miss / slope : std::copysign(3., miss);
+    double step = slope > 0 ? miss / slope : std::copysign(3., miss);
+    // Distances that leave e without a stationary point within reach end at the hundredth trial.
     const bool last = std::abs(step) < kSmallStep || k == 99;
     if (last) {
+      step = std::clamp(step, -kSmallStep, kSmallStep);
       if (!data.equal) sums = sums_unequal(data, inverse_scale, true);
       value = data.kept * (log_gamma - data.p * e / 2) + data.p / 2 * data.mean_log -
               half * sums.log_one_plus + half * miss * step / 2;
@@ -161,6 +163,9 @@ void fill(const ScaledF& data, Index first, Index last, Index stride, Eigen::Arr
     if (done == 1) e = before[0] + grid_step() * static_cast<double>(stride);
     if (done == 2) e = 2 * before[0] - before[1];
     if (done >= 3) e = 3 * (before[0] - before[1]) + before[2];
+    // Never further than what keeps delta/E and its products finite.
+    if (done > 0) e = std::clamp(e, before[0] - 1, before[0] + 1);
+    e = std::max(e, data.log_largest - 345);
     lp(k) = log_posterior(data, k, e);
     before = {e, before[0], before[1]};
   }

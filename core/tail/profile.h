@@ -24,6 +24,7 @@ struct ScaledF {
   bool equal = false;      // all v_i the same
   double p = 0;            // p_e > 0
   double mean_log = 0;     // sum v ln delta
+  double log_largest = 0;  // ln of the largest delta; none is below 1e-150 of it
   double log_gamma_p = 0;  // lgamma(p_e/2)
   double samples = 0;      // n_eff
   double rate = 10;        // of the Gamma(2, rate) prior on 1/nu

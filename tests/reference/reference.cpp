@@ -1,7 +1,10 @@
 #include "tests/reference/reference.h"
 
 #include <Eigen/Cholesky>
+#include <algorithm>
+#include <boost/math/special_functions/beta.hpp>
 #include <cmath>
+#include <numeric>
 #include <vector>
 
 namespace tailweir::reference {
@@ -128,6 +131,51 @@ Posterior leave_one_out(const Fit& fit, const Eigen::ArrayXd& mass, Eigen::Index
   const double share = std::min(std::max((1 / result.nu - .125) / .125, 0.), 1.);
   result.blended = 1 / (1 / m + share * (1 / result.nu - 1 / m));
   return result;
+}
+
+double censored_nu(const Eigen::ArrayXd& delta, const Eigen::ArrayXd& mass, double pe, double share,
+                   double rate) {
+  const Eigen::ArrayXd v = mass / mass.sum();
+  // Censors from the top while the censored mass stays within the share.
+  std::vector<Eigen::Index> order(static_cast<std::size_t>(delta.size()));
+  std::iota(order.begin(), order.end(), Eigen::Index{0});
+  std::sort(order.begin(), order.end(),
+            [&](Eigen::Index a, Eigen::Index b) { return delta(a) > delta(b); });
+  double above = 0;
+  std::size_t first = 0;
+  while (above + v(order[first]) <= share) above += v(order[first++]);
+  const double limit = delta(order[first]);
+  const auto log_likelihood = [&](double nu, double e) {
+    double sum =
+        above * std::log(boost::math::ibetac(pe / 2, nu / 2, limit / (limit + std::exp(e))));
+    for (std::size_t k = first; k < order.size(); ++k) {
+      const double y = std::log(delta(order[k])) - e;
+      sum += v(order[k]) * (std::lgamma((pe + nu) / 2) - std::lgamma(pe / 2) - std::lgamma(nu / 2) +
+                            pe / 2 * y - (pe + nu) / 2 * std::log1p(std::exp(y)));
+    }
+    return sum;
+  };
+  std::vector<double> lp, grid;
+  for (int k = 0; k < 121; ++k) {
+    const double nu = .3 * std::pow(1000 / .3, k / 120.);
+    double low = -20, high = 20;
+    const double golden = .6180339887498949;
+    for (int j = 0; j < 60; ++j) {
+      const double a = high - golden * (high - low), b = low + golden * (high - low);
+      (log_likelihood(nu, a) > log_likelihood(nu, b) ? high : low) =
+          log_likelihood(nu, a) > log_likelihood(nu, b) ? b : a;
+    }
+    grid.push_back(nu);
+    lp.push_back(log_likelihood(nu, .5 * (low + high)) / v.square().sum() -
+                 std::log(pe * nu / (pe + nu + 2)) / 2 - 2 * std::log(nu) - rate / nu);
+  }
+  const double top = *std::max_element(lp.begin(), lp.end());
+  double sum = 0, inverse = 0;
+  for (std::size_t k = 0; k < lp.size(); ++k) {
+    sum += std::exp(lp[k] - top);
+    inverse += std::exp(lp[k] - top) / grid[k];
+  }
+  return sum / inverse;
 }
 
 Eigen::MatrixXd wave_samples(Eigen::Index p, Eigen::Index n, bool shifted) {

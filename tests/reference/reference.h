@@ -24,6 +24,11 @@ struct Posterior {
 Posterior leave_one_out(const Fit& fit, const Eigen::ArrayXd& mass, Eigen::Index p, double nu0,
                         bool centre_estimated, double rate, Eigen::ArrayXd* delta = nullptr);
 
+// nu of the posterior with delta above its weighted (1 - share) quantile censored, from corrected
+// distances: golden section over the scale on the plain likelihood at each of the 121 nu.
+double censored_nu(const Eigen::ArrayXd& delta, const Eigen::ArrayXd& mass,
+                   double effective_channels, double share, double rate);
+
 // Test vectors: x_ij = exp(1.2 sin(3.1 i + 1)) sin(12.9 i + 7.3 j + .4 i j) [+ .5 (j + 1)].
 Eigen::MatrixXd wave_samples(Eigen::Index p, Eigen::Index n, bool shifted);
 
