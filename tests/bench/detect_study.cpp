@@ -90,7 +90,8 @@ void flags(int runs) {
         random.sample(nu, x);
         const double d = tracker.predict(x, t);
         if (tracker.tracking() && tracker.health().samples_effective >= 5. * p - 1) {
-          tracker.score(centred, q, diagonal);
+          tracker.residuals(q, diagonal);
+          tracker.centred(centred);
           const FlagScore score = flags.score({d, centred, q, diagonal}, {5. * p, nu, false});
           if (score.fitted) {
             ++counted;
@@ -140,7 +141,8 @@ void channels(int runs) {
           Eigen::VectorXd moved = x;
           moved[3] += 6;  // in conditional scatter units: harder than in standard deviations
           const double d = tracker.predict(moved, t);
-          tracker.score(centred, q, diagonal);
+          tracker.residuals(q, diagonal);
+          tracker.centred(centred);
           const ScoredSample sample{d, centred, q, diagonal};
           const FlagScore score = flags.score(sample, {double(n), nu, false}, false);
           ++tried;
@@ -153,7 +155,8 @@ void channels(int runs) {
         }
         const double d = tracker.predict(x, t);
         if (tracker.tracking()) {
-          tracker.score(centred, q, diagonal);
+          tracker.residuals(q, diagonal);
+          tracker.centred(centred);
           flags.score({d, centred, q, diagonal}, {double(n), nu, false});
         }
         tracker.absorb();

@@ -43,7 +43,8 @@ class Watched {
   bool look(const Eigen::VectorXd& x, bool remember, FlagScore& score) {
     const double d = tracker_.predict(x, t_ += remember);
     if (!tracker_.tracking() || tracker_.health().samples_effective < n_ - 1) return false;
-    tracker_.score(centred_, q_, diagonal_);
+    tracker_.residuals(q_, diagonal_);
+    tracker_.centred(centred_);
     score = flags_.score({d, centred_, q_, diagonal_}, {n_, nu_, false}, remember);
     return true;
   }
