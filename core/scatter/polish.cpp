@@ -96,16 +96,16 @@ void Polish::factor() {
 void Polish::estimate_condition() {
   double largest[2] = {0, 0};
   for (int side = 0; side < 2; ++side) {
-    auto v = directions_.col(side);
+    Eigen::Block<Eigen::MatrixXd> v = directions_.block(0, side, dimension_, 1);
     for (int k = 0; k < 3; ++k) {
       if (side == 0) {
-        v = factor_.triangularView<Eigen::Lower>().transpose() * v;
+        spd::multiply_transposed(factor_, v);
         largest[side] = v.squaredNorm();
-        v = factor_.triangularView<Eigen::Lower>() * v;
+        spd::multiply(factor_, v);
       } else {
-        factor_.triangularView<Eigen::Lower>().solveInPlace(v);
+        spd::solve(factor_, v);
         largest[side] = v.squaredNorm();
-        factor_.triangularView<Eigen::Lower>().transpose().solveInPlace(v);
+        spd::solve_transposed(factor_, v);
       }
       const double norm = v.norm();
       if (!(norm > 0) || !std::isfinite(norm)) {

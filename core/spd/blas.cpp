@@ -53,6 +53,14 @@ void multiply_transposed(const ConstMatrixRef& l, MatrixRef x) {
               to_int(x.outerStride()));
 }
 
+void multiply(const ConstMatrixRef& l, MatrixRef x) {
+  assert(l.rows() == x.rows());
+  single_threaded();
+  cblas_dtrmm(CblasColMajor, CblasLeft, CblasLower, CblasNoTrans, CblasNonUnit, to_int(x.rows()),
+              to_int(x.cols()), 1.0, l.data(), to_int(l.outerStride()), x.data(),
+              to_int(x.outerStride()));
+}
+
 void solve(const ConstMatrixRef& l, MatrixRef x) {
   assert(l.rows() == x.rows());
   single_threaded();

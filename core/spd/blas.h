@@ -23,6 +23,9 @@ using ConstMatrixRef = Eigen::Ref<const Eigen::MatrixXd, 0, Eigen::OuterStride<>
 // x (p x k) <- L' x, with L (p x p) lower triangular. k p^2/2 multiply-adds.
 void multiply_transposed(const ConstMatrixRef& l, MatrixRef x);
 
+// x (p x k) <- L x, with L (p x p) lower triangular. k p^2/2 multiply-adds.
+void multiply(const ConstMatrixRef& l, MatrixRef x);
+
 // x (p x k) <- L^-1 x. k p^2/2 multiply-adds.
 void solve(const ConstMatrixRef& l, MatrixRef x);
 
