@@ -85,6 +85,7 @@ double FilterStep::operator()(const EmissionTable& table, double y, FilterState&
   w.segment<padded>(1) = state.weight;
   w[0] = w[1];
   w[n + 1] = w[n];
+  w[padded + 1] = 0;  // beyond the padding: multiplied by the last emission, 0, it must be a number
   const double scale = 1 / state.total;
   state.weight = emission * ((stay_ * scale) * w.segment<padded>(1) +
                              (move_ * scale) * (w.head<padded>() + w.tail<padded>()) + jump_);
