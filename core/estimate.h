@@ -7,6 +7,7 @@
 #include <cstdint>
 #include <vector>
 
+#include "core/detect/alert.h"
 #include "core/settings.h"
 #include "core/tail/tail.h"
 
@@ -62,6 +63,13 @@ struct Flag {
   double rank_p_value = 0;   // share of past distances at least as large, (1 + #)/(K + 1)
   Severity severity = Severity::usual;
   std::vector<ChannelBlame> channels;  // largest |residual| first, at most 5
+};
+
+// An alert of a horizon's monitors that has just changed its stage.
+struct HorizonAlert {
+  Index horizon = 0;
+  detect::Alert alert;           // counts samples by its own monitor
+  std::int64_t samples_ago = 0;  // how long ago the change began, in samples its monitor saw
 };
 
 }  // namespace tailweir

@@ -37,6 +37,7 @@ double first_nu(const PanelSettings& panel) {
 Horizon::Horizon(const PanelSettings& panel, const HorizonSettings& settings)
     : nu_settings_(panel.nu),
       flags_(panel.channels, {panel.flags.rate, panel.flags.severe_rate, 0}),
+      memory_(settings.memory),
       centre_(panel.centre),
       p_(panel.channels),
       exact_(settings.tolerance && *settings.tolerance <= 1e-6),
@@ -48,6 +49,13 @@ Horizon::Horizon(const PanelSettings& panel, const HorizonSettings& settings)
   estimate_.nu = estimate_.nu_low = estimate_.nu_high = kNaN;
   estimate_.nu_fit = estimate_.covariance_factor = estimate_.log_volatility = kNaN;
   estimate_.residual = estimate_.distance = estimate_.p_value = estimate_.condition = kNaN;
+  if (panel.alerts.on) {
+    detect::AlertSettings alerts;
+    alerts.channels = panel.channels;
+    alerts.mean_samples_between_false = panel.alerts.mean_samples_between_false;
+    alerts_.emplace(alerts);
+  }
+  changed_.reserve(4);
   if (nu_settings_.method == NuMethod::fixed) {
     nu_.nu = nu_.nu_low = nu_.nu_high = nu_.unblended = nu_settings_.fixed;
     nu_.status = tail::NuStatus::fixed;
@@ -60,6 +68,7 @@ bool Horizon::push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time
   estimate_.p_value =
       has_nu_ ? student::tail_probability(estimate_.distance, static_cast<double>(p_), nu_.nu)
               : kNaN;
+  changed_.clear();
   const bool flagged = has_nu_ && std::isfinite(estimate_.distance) && score(x, flag);
   tracker_.absorb();
   ++since_nu_;
@@ -83,6 +92,7 @@ bool Horizon::score(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag) {
                                        centre_.kind == CentreKind::estimated};
   const bool stale = repeats_.stale(x);
   const detect::FlagScore score = flags_.score(sample, known, !stale);
+  watch(stale);
   if (score.level == detect::FlagLevel::usual) return false;
   flag.distance = estimate_.distance;
   flag.p_value = score.combined;
@@ -96,6 +106,43 @@ bool Horizon::score(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag) {
         {part.channel, x(part.channel), part.residual, part.share, part.p_value});
   }
   return true;
+}
+
+// A memory that is still filling inflates distances in a way that is not a shift of anything.
+bool Horizon::mature() const {
+  const double n = tracker_.health().samples_effective;
+  switch (memory_.kind) {
+    case Memory::Kind::window_samples:
+      return n >= memory_.length - .5;
+    case Memory::Kind::half_life_samples:
+      return n >= 2.6 * memory_.length;
+    default:
+      return n >= 5 * static_cast<double>(p_);
+  }
+}
+
+// Feeds the shift monitors.
+void Horizon::watch(bool stale) {
+  if (!alerts_ || !mature()) return;
+  if (alerts_->has_shape() && !shape_referenced_) {
+    Eigen::MatrixXd s;
+    Eigen::VectorXd m;
+    shape_referenced_ = tracker_.scatter(s, m) && alerts_->shape().set_reference(s);
+    if (!shape_referenced_) return;
+  }
+  tracker_.centred_roughly(centred_);
+  detect::AlertInput input;
+  input.distance = estimate_.distance;
+  input.fresh = !stale;
+  input.fitted = flags_.fit().ready();
+  input.nu = flags_.fit().nu();
+  input.log_scale = flags_.fit().log_scale();
+  input.centred = &centred_;
+  const detect::AlertEvents& events = alerts_->push(input);
+  for (int k = 0; k < events.count; ++k) {
+    const detect::Alert& alert = events.event[static_cast<std::size_t>(k)];
+    changed_.push_back({0, alert, alert.changed_at - alert.since});
+  }
 }
 
 void Horizon::refresh_nu() {

@@ -7,6 +7,7 @@
 
 #include <Eigen/Core>
 #include <cstdint>
+#include <optional>
 #include <vector>
 
 #include "core/detect/alerts.h"
@@ -27,6 +28,9 @@ class Horizon {
   // index, when the sample is flagged.
   bool push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time_ns, Flag& flag);
 
+  // Alerts that changed their stage with the last sample, at most one a kind.
+  const std::vector<HorizonAlert>& alerts() const { return changed_; }
+
   const Estimate& estimate() const { return estimate_; }
   bool scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const { return tracker_.scatter(s, m); }
   const TrackerHealth& health() const { return tracker_.health(); }
@@ -37,10 +41,16 @@ class Horizon {
   tail::NuEstimate nu_from_view();
   void converge_jointly();
   void publish();
+  void watch(bool stale);
+  bool mature() const;
 
   NuSettings nu_settings_;
   detect::Flags flags_;
   detect::RepeatScreen repeats_;
+  std::optional<detect::Alerts> alerts_;
+  bool shape_referenced_ = false;
+  std::vector<HorizonAlert> changed_;
+  Memory memory_;
   CentreSettings centre_;
   Index p_;
   bool exact_;

@@ -35,6 +35,7 @@ class Panel {
   // Results of the last push, for horizon h in [0, horizons()).
   const Estimate& estimate(Index h) const;
   const std::vector<Flag>& flags() const;
+  const std::vector<HorizonAlert>& alerts() const;
 
   // Writes the current scatter (p x p) and centre (p) of horizon h. False, with both untouched,
   // while it has none (warming, or never live). O(p^2) to O(p^3).

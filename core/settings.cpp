@@ -136,6 +136,10 @@ Result<PanelSettings> validate(PanelSettings panel) {
     return wrong("flags.severe_rate", "the rate of severe flags is above the rate of flags",
                  "a share above 0 and at most the rate");
   }
+  if (panel.alerts.on && !(panel.alerts.mean_samples_between_false > 100)) {
+    return wrong("alerts", "mean_samples_between_false is too small",
+                 "a number above 100, such as 5000");
+  }
   if (panel.horizons.empty()) {
     return wrong("horizons", "a panel needs a horizon", "at least one window or half-life");
   }

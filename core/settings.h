@@ -67,6 +67,12 @@ struct FlagSettings {
   double severe_rate = 1e-4;  // nominal share flagged as severe, in (0, rate]
 };
 
+// Shift alerts of a horizon. Off: nothing is watched.
+struct AlertRates {
+  bool on = true;
+  double mean_samples_between_false = 5000;  // all kinds and directions together, > 100
+};
+
 struct PanelSettings {
   std::string name;
   Index channels = 0;  // p >= 1
@@ -74,6 +80,7 @@ struct PanelSettings {
   NuSettings nu;
   ShrinkageSettings shrinkage;
   FlagSettings flags;
+  AlertRates alerts;
   std::vector<HorizonSettings> horizons;  // at least one, names distinct
 };
 

@@ -83,6 +83,7 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
       precision_(dimension_),
       offset_(Eigen::VectorXd::Zero(p_)),
       unit_(Eigen::VectorXd::Ones(p_)),
+      shift_(Eigen::VectorXd::Zero(p_)),
       polish_(dimension_, lift_),
       scratch_(dimension_, dimension_),
       block_(p_, p_),
@@ -645,6 +646,15 @@ void Tracker::adopt() {
   }
   precision_.settle();
   precision_.copy_to(good_);
+  if (lift_ == 1) {
+    block_ = good_.topLeftCorner(p_, p_);
+    column_ = -good_.row(p_).head(p_).transpose();
+    if (spd::cholesky(block_)) {
+      spd::solve(block_, column_);
+      spd::solve_transposed(block_, column_);
+      shift_ = column_.col(0);
+    }
+  }
   good_total_ = total_;
   good_offset_ = offset_;
   good_unit_ = unit_;
@@ -735,6 +745,12 @@ void Tracker::centred(Eigen::Ref<Eigen::VectorXd> x) const {
   spd::solve(block_, column_);
   spd::solve_transposed(block_, column_);
   x -= unit_.cwiseProduct(column_.col(0));
+}
+
+void Tracker::centred_roughly(Eigen::Ref<Eigen::VectorXd> x) const {
+  for (Index j = 0; j < p_; ++j) {
+    x(j) = (x_[static_cast<std::size_t>(j)] - shift_(j)) * unit_(j) / shrink_;
+  }
 }
 
 bool Tracker::scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const {

@@ -104,6 +104,9 @@ class Tracker {
   // The same sample's x - m (p). O(p^3/6) with an estimated centre, O(p) otherwise.
   void centred(Eigen::Ref<Eigen::VectorXd> x) const;
 
+  // The same against the centre of the last polish, O(p): for directions, not for distances.
+  void centred_roughly(Eigen::Ref<Eigen::VectorXd> x) const;
+
   // Current S (p x p, whole) and m (p), channels' units; the last good ones when not tracking().
   // False, both untouched, when there are none or they do not factorise. p^3/2 multiply-adds.
   bool scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const;
@@ -159,6 +162,7 @@ class Tracker {
   std::int64_t base_position_ = 0, base_time_ = 0;  // where omega is 1
 
   Eigen::VectorXd offset_, unit_;
+  Eigen::VectorXd shift_;  // m - offset of the last polish, scaled
   std::vector<double> x_, y_, x_old_, y_old_, scratch_values_;
   double q_new_ = 0, q_old_ = 0, q_cross_ = 0;
   double enter_scale_ = 0;  // W/M before the removal that came with the new sample

@@ -105,7 +105,7 @@ class Replay {
   RunSummary::Run about_;
   std::vector<std::size_t> columns_;  // of each channel of the settings
   Actions actions_;
-  OutputFile estimates_, flags_, last_, report_;
+  OutputFile estimates_, flags_, alerts_, last_, report_;
 };
 
 std::optional<Fault> Replay::match_columns() {
@@ -130,10 +130,12 @@ std::optional<Fault> Replay::match_columns() {
 bool Replay::take(const Actions& actions) {
   for (const Record& record : actions.records) {
     summary_.add(record);
-    const bool flag = std::holds_alternative<FlagRecord>(record);
-    lines_.append(record, flag ? flags_.text : estimates_.text);
+    std::string& out = std::holds_alternative<FlagRecord>(record)    ? flags_.text
+                       : std::holds_alternative<AlertRecord>(record) ? alerts_.text
+                                                                     : estimates_.text;
+    lines_.append(record, out);
   }
-  return estimates_.flush(false) && flags_.flush(false);
+  return estimates_.flush(false) && flags_.flush(false) && alerts_.flush(false);
 }
 
 int Replay::play(bool keep_going) {
@@ -170,6 +172,7 @@ int Replay::run(const ReplayOptions& options) {
   const std::filesystem::path into = options.directory;
   const std::pair<OutputFile*, const char*> files[] = {{&estimates_, "estimates.jsonl"},
                                                        {&flags_, "flags.jsonl"},
+                                                       {&alerts_, "alerts.jsonl"},
                                                        {&last_, "last.jsonl"},
                                                        {&report_, "report.txt"}};
   for (const auto& [file, name] : files) {

@@ -53,6 +53,11 @@ class Tap {
       }
       return true;
     }
+    if (const auto* alert = std::get_if<Subscriber::AlertLine>(&message.content)) {
+      const std::string text = options_.json ? alert->json : alert_text(alert->json);
+      std::printf(colour_ && !options_.json ? "\033[1m%s\033[0m\n" : "%s\n", text.c_str());
+      return true;
+    }
     return false;
   }
 

@@ -59,4 +59,13 @@ std::string flag_text(const std::string& json) {
          short_number(flag.value("flagged_expected", 0.)) + " expected)";
 }
 
+std::string alert_text(const std::string& json) {
+  const nlohmann::json alert = nlohmann::json::parse(json, nullptr, false);
+  if (!alert.is_object()) return {};
+  return clock_text(alert.value("time", "")) + "  " +
+         padded(alert.value("panel", "") + "/" + alert.value("horizon", ""), 24) +
+         padded("ALERT", 9) + alert.value("kind", "") + " " + alert.value("stage", "") + ": " +
+         alert.value("text", "");
+}
+
 }  // namespace tailweir

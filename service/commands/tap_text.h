@@ -16,4 +16,7 @@ std::string estimate_text(const EstimateRecord& record,
 // flag's JSON line; empty when it is not one.
 std::string flag_text(const std::string& json);
 
+// "12:01:00  metals/slow   ALERT tail heavier raised: ..." from the alert's JSON line.
+std::string alert_text(const std::string& json);
+
 }  // namespace tailweir

@@ -4,6 +4,7 @@
 #include <cmath>
 #include <map>
 
+#include "core/detect/alert.h"
 #include "service/assemble/changes.h"
 
 namespace tailweir {
@@ -77,6 +78,7 @@ struct Engine::Body {
 
   Refusal check(const SampleEvent& event, std::vector<double>& change) const;
   void push(const SampleEvent& event, const std::vector<double>& change, Actions& actions);
+  AlertRecord alert_record(std::size_t panel, const HorizonAlert& alert) const;
   void fill_matrices(std::size_t panel, Index horizon, EstimateRecord& record) const;
 
   Settings settings;
@@ -210,7 +212,28 @@ void Engine::Body::push(const SampleEvent& event, const std::vector<double>& cha
           settings.panels[k].core.flags.rate * static_cast<double>(scored[k][h]);
       actions.records.emplace_back(std::move(record));
     }
+    for (const HorizonAlert& alert : panels[k].alerts()) {
+      actions.records.emplace_back(alert_record(k, alert));
+    }
   }
+}
+
+AlertRecord Engine::Body::alert_record(std::size_t panel, const HorizonAlert& alert) const {
+  const auto name = [&](Eigen::Index channel) {
+    return channel < 0 ? std::string()
+                       : descriptions[panel].channels[static_cast<std::size_t>(channel)];
+  };
+  AlertRecord record;
+  record.sequence = sequence;
+  record.time_ns = last_time_ns;
+  record.panel = static_cast<std::uint32_t>(panel);
+  record.horizon = static_cast<std::uint32_t>(alert.horizon);
+  const auto ago = static_cast<std::uint64_t>(std::max<std::int64_t>(alert.samples_ago, 0));
+  record.since = ago < sequence ? sequence - ago : 1;
+  record.alert = alert.alert;
+  record.text = detect::describe(alert.alert, alert.alert.changed_at, name(alert.alert.first),
+                                 name(alert.alert.second));
+  return record;
 }
 
 void Engine::Body::fill_matrices(std::size_t panel, Index horizon, EstimateRecord& record) const {

@@ -44,6 +44,16 @@ struct FlagRecord {
   double flagged_expected = 0;  // flags expected at the nominal rate by now
 };
 
-using Record = std::variant<EstimateRecord, FlagRecord>;
+struct AlertRecord {
+  std::uint64_t sequence = 0;
+  std::int64_t time_ns = 0;
+  std::uint32_t panel = 0;
+  std::uint32_t horizon = 0;
+  std::uint64_t since = 0;  // sequence of the sample the change is dated to
+  detect::Alert alert;
+  std::string text;  // what changed, from what to what, since when, with what confidence
+};
+
+using Record = std::variant<EstimateRecord, FlagRecord, AlertRecord>;
 
 }  // namespace tailweir

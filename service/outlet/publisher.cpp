@@ -15,6 +15,7 @@ Publisher::Publisher(std::vector<PanelDescription> descriptions, std::uint64_t e
   for (const PanelDescription& panel : descriptions_) {
     estimate_numbers_.emplace_back(panel.horizons.size(), 0);
     flag_numbers_.push_back(0);
+    alert_numbers_.push_back(0);
   }
 }
 
@@ -49,6 +50,18 @@ void Publisher::publish(const std::vector<Record>& records) {
     if (const EstimateRecord* estimate = std::get_if<EstimateRecord>(&record)) {
       send(wire::encode_estimate(*estimate, descriptions_[estimate->panel], epoch_,
                                  ++estimate_numbers_[estimate->panel][estimate->horizon]));
+      continue;
+    }
+    if (const AlertRecord* alert = std::get_if<AlertRecord>(&record)) {
+      wire::Header header;
+      header.kind = wire::Kind::alert;
+      header.epoch = epoch_;
+      header.sequence = alert->sequence;
+      header.time_ns = alert->time_ns;
+      header.channels = static_cast<std::uint32_t>(descriptions_[alert->panel].channels.size());
+      header.number = ++alert_numbers_[alert->panel];
+      send(wire::encode(wire::alert_topic(descriptions_[alert->panel]), header,
+                        lines_.line(*alert)));
       continue;
     }
     const FlagRecord& flag = *std::get_if<FlagRecord>(&record);

@@ -46,7 +46,7 @@ class Publisher {
   RecordLines lines_;
   std::unique_ptr<zmq::socket_t> socket_;
   std::vector<std::vector<std::uint32_t>> estimate_numbers_;
-  std::vector<std::uint32_t> flag_numbers_;
+  std::vector<std::uint32_t> flag_numbers_, alert_numbers_;
   std::uint32_t pulse_number_ = 0;
 };
 

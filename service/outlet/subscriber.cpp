@@ -83,6 +83,9 @@ std::optional<Subscriber::Message> Subscriber::next(std::chrono::milliseconds wa
       case wire::Kind::flag:
         result.content = FlagLine{std::string(view.payload)};
         return result;
+      case wire::Kind::alert:
+        result.content = AlertLine{std::string(view.payload)};
+        return result;
       case wire::Kind::pulse:
         result.content = PulseText{std::string(view.payload)};
         return result;

@@ -24,12 +24,16 @@ class Subscriber {
   struct FlagLine {
     std::string json;  // as replay writes it
   };
+  struct AlertLine {
+    std::string json;  // as replay writes it
+  };
   struct PulseText {
     std::string json;
   };
   struct Message {
     wire::Header header;
-    std::variant<EstimateRecord, FlagLine, PulseText, std::vector<PanelDescription>> content;
+    std::variant<EstimateRecord, FlagLine, AlertLine, PulseText, std::vector<PanelDescription>>
+        content;
   };
 
   // topic: a prefix such as "estimate/metals"; empty for everything.

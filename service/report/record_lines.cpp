@@ -192,6 +192,12 @@ bool RecordLines::knows(const FlagRecord& record) const {
       [p](const ChannelBlame& blame) { return blame.channel >= 0 && blame.channel < p; });
 }
 
+bool RecordLines::knows(const AlertRecord& record) const {
+  if (!has(record.panel, record.horizon)) return false;
+  const auto p = static_cast<Index>(pieces_[record.panel].channel.size());
+  return record.alert.first < p && record.alert.second < p;
+}
+
 bool RecordLines::knows(const Record& record) const {
   return std::visit([this](const auto& one) { return knows(one); }, record);
 }
@@ -199,8 +205,10 @@ bool RecordLines::knows(const Record& record) const {
 void RecordLines::append(const Record& record, std::string& out) const {
   if (const auto* estimate = std::get_if<EstimateRecord>(&record)) {
     append(*estimate, matrices_.wants(estimate->sequence, estimate->flagged), out);
+  } else if (const auto* flag = std::get_if<FlagRecord>(&record)) {
+    append(*flag, out);
   } else {
-    append(*std::get_if<FlagRecord>(&record), out);
+    append(*std::get_if<AlertRecord>(&record), out);
   }
 }
 
@@ -249,6 +257,8 @@ void RecordLines::append(const FlagRecord& record, std::string& out) const {
   out += pieces.panel_and_horizon[record.horizon];
   put(",\"distance\":", record.flag.distance, out);
   put(",\"p_value\":", record.flag.p_value, out);
+  put(",\"joint_p_value\":", record.flag.joint_p_value, out);
+  put(",\"rank_p_value\":", record.flag.rank_p_value, out);
   put_word(",\"severity\":", name_of(record.flag.severity), out);
   out += ",\"flagged\":";
   put_whole(record.flagged, out);
@@ -265,6 +275,34 @@ void RecordLines::append(const FlagRecord& record, std::string& out) const {
     out += '}';
   }
   out += "]}\n";
+}
+
+void RecordLines::append(const AlertRecord& record, std::string& out) const {
+  assert(knows(record));
+  const Pieces& pieces = pieces_[record.panel];
+  const detect::Alert& alert = record.alert;
+  put_head(record.sequence, record.time_ns, out);
+  out += pieces.panel_and_horizon[record.horizon];
+  out += ",\"id\":";
+  put_whole(alert.id, out);
+  put_word(",\"kind\":", detect::word(alert.kind), out);
+  put_word(",\"direction\":", detect::word(alert.direction), out);
+  put_word(",\"stage\":", detect::word(alert.stage), out);
+  put(",\"statistic\":", alert.statistic, out);
+  put(",\"threshold\":", alert.threshold, out);
+  out += ",\"since\":";
+  put_whole(record.since, out);
+  put(",\"from\":", alert.from, out);
+  put(",\"to\":", alert.to, out);
+  put(",\"confidence\":", detect::confidence(alert), out);
+  out += ",\"channels\":[";
+  if (alert.first >= 0 && alert.second >= 0) {
+    out += pieces.channel[static_cast<std::size_t>(alert.first)] + "," +
+           pieces.channel[static_cast<std::size_t>(alert.second)];
+  }
+  out += ']';
+  put_word(",\"text\":", record.text.c_str(), out);
+  out += "}\n";
 }
 
 }  // namespace tailweir

@@ -24,7 +24,7 @@ const char* name_of(StateReason reason);
 const char* name_of(tail::NuStatus status);
 const char* name_of(Severity severity);
 
-// Reads "every", a whole number N > 0, "flagged" (also "alerts", until there are any) or "never".
+// Reads "every", a whole number N > 0, "flagged" (also "alerts") or "never".
 Result<MatricesPolicy> parse_matrices_policy(const std::string& text);
 
 class RecordLines {
@@ -36,11 +36,13 @@ class RecordLines {
   bool knows(const Record& record) const;
   bool knows(const EstimateRecord& record) const;
   bool knows(const FlagRecord& record) const;
+  bool knows(const AlertRecord& record) const;
 
   // Appends the line of a record, line feed included. Precondition: knows(record). No allocation
   // once `out` has room.
   void append(const Record& record, std::string& out) const;
   void append(const FlagRecord& record, std::string& out) const;
+  void append(const AlertRecord& record, std::string& out) const;
   // The same with the policy overruled.
   void append(const EstimateRecord& record, bool matrices, std::string& out) const;
 

@@ -11,6 +11,7 @@
 namespace tailweir {
 namespace {
 
+constexpr std::size_t kAlerts = 40;
 constexpr std::size_t kLargest = 10;
 
 __attribute__((format(printf, 1, 2))) std::string format(const char* pattern, ...) {
@@ -64,6 +65,13 @@ void RunSummary::add(const Record& record) {
     keep_large(*flag);
     return;
   }
+  if (const auto* alert = std::get_if<AlertRecord>(&record)) {
+    HorizonSummary& horizon = horizons_[alert->panel][alert->horizon];
+    horizon.raised += alert->alert.stage == detect::AlertStage::raised;
+    horizon.confirmed += alert->alert.stage == detect::AlertStage::confirmed;
+    if (alerts_.size() < kAlerts) alerts_.push_back(*alert);
+    return;
+  }
   const auto& estimate = *std::get_if<EstimateRecord>(&record);
   HorizonSummary& horizon = horizons_[estimate.panel][estimate.horizon];
   ++horizon.estimates;
@@ -113,6 +121,9 @@ std::string RunSummary::panel_text(std::size_t panel) const {
                    static_cast<unsigned long long>(horizon.flags),
                    static_cast<unsigned long long>(horizon.severe),
                    static_cast<double>(horizon.scored) * rates_[panel]);
+    text += format("    alerts              %llu raised, %llu confirmed\n",
+                   static_cast<unsigned long long>(horizon.raised),
+                   static_cast<unsigned long long>(horizon.confirmed));
   }
   return text;
 }
@@ -155,6 +166,12 @@ std::string RunSummary::text(const Run& run, const EngineCounters& counters) con
   }
   if (!run.ended_early.empty()) text += "ended      early, at " + run.ended_early + "\n";
   for (std::size_t panel = 0; panel < horizons_.size(); ++panel) text += "\n" + panel_text(panel);
+  text += alerts_.empty() ? "\nno alerts\n" : "\nalerts\n";
+  for (const AlertRecord& alert : alerts_) {
+    text += "  " + format_time(alert.time_ns) + "  panel " + descriptions_[alert.panel].name +
+            "  horizon " + descriptions_[alert.panel].horizons[alert.horizon] + "  " +
+            detect::word(alert.alert.kind) + "\n      " + alert.text + "\n";
+  }
   text += largest_.empty() ? "\nno flags\n" : "\nlargest flags\n";
   for (const LargestFlag& flag : largest_) text += flag_text(flag);
   text += "\nEstimates are model outputs; check them independently before anything acts on them.\n";

@@ -30,6 +30,7 @@ class RunSummary {
  private:
   struct HorizonSummary {
     std::uint64_t estimates = 0, not_live = 0, scored = 0, flags = 0, severe = 0;
+    std::uint64_t raised = 0, confirmed = 0;
     EstimateRecord last;  // without matrices
   };
   // A flagged sample of a panel: its most extreme horizon, and the names of all that flagged it.
@@ -44,6 +45,7 @@ class RunSummary {
   std::vector<PanelDescription> descriptions_;
   std::vector<double> rates_;                          // nominal flag rate, by panel
   std::vector<std::vector<HorizonSummary>> horizons_;  // by panel
+  std::vector<AlertRecord> alerts_;                    // the first forty
   std::vector<LargestFlag> largest_;                   // most extreme first, at most ten
   std::int64_t first_time_ns_ = 0, last_time_ns_ = 0;
   bool empty_ = true;

@@ -16,12 +16,12 @@
 namespace tailweir {
 
 struct SaltmarchEvents {
-  std::uint64_t mistyped_at = 620;  // samples count from 1
+  std::uint64_t mistyped_at = 1740;  // samples count from 1
   std::size_t mistyped_channel = 4;
   double mistyped_factor = 1.027;  // of the price
-  std::uint64_t heavy_from = 760;
+  std::uint64_t heavy_from = 1950;
   double calm_nu = 8, heavy_nu = 3;
-  std::uint64_t stale_from = 1120, stale_to = 1180;
+  std::uint64_t stale_from = 2330, stale_to = 2390;
   std::size_t stale_channel = 9;
 };
 
@@ -30,7 +30,7 @@ class SaltmarchScenario {
   explicit SaltmarchScenario(std::uint64_t seed, bool events = true);
 
   const std::vector<std::string>& channels() const { return channels_; }
-  std::uint64_t length() const { return 1300; }
+  std::uint64_t length() const { return 2450; }
   const SaltmarchEvents& planted() const { return planted_; }
   bool has_events() const { return events_; }
 

@@ -206,9 +206,12 @@ bool read_flags(const YamlNode& node, ValueReader& reader, FlagSettings& out) {
   return severe == nullptr || read_share(*severe, "severe_rate", reader, out.severe_rate);
 }
 
-bool read_alerts(const YamlNode& node, ValueReader& reader, AlertSettings& out) {
+bool read_alerts(const YamlNode& node, ValueReader& reader, AlertRates& out) {
+  if (node.text == "none") {
+    out.on = false;
+    return true;
+  }
   if (!reader.map(node, "alerts", {"mean_samples_between_false"})) return false;
-  out.given = true;
   const YamlNode* mean = node.find("mean_samples_between_false");
   if (mean == nullptr) return true;
   double value = 0;
@@ -272,7 +275,7 @@ bool read_panel(const YamlNode& node, const std::vector<ChannelSettings>& channe
   part = node.find("flags");
   if (part != nullptr && !read_flags(*part, reader, core.flags)) return false;
   part = node.find("alerts");
-  if (part != nullptr && !read_alerts(*part, reader, out.alerts)) return false;
+  if (part != nullptr && !read_alerts(*part, reader, out.core.alerts)) return false;
   Result<PanelSettings> checked = validate(core);
   if (!checked) {
     const Fault& fault = checked.fault();

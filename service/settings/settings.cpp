@@ -199,7 +199,6 @@ std::vector<std::string> not_used(const Settings& settings) {
     if (panel.core.shrinkage.target != ShrinkageTarget::none) {
       keys.push_back("panels." + panel.core.name + ".shrinkage");
     }
-    if (panel.alerts.given) keys.push_back("panels." + panel.core.name + ".alerts");
   }
   return keys;
 }

@@ -25,15 +25,9 @@ struct ChannelSettings {
   double scale = 1;                  // multiplies the change; finite, not 0
 };
 
-struct AlertSettings {
-  bool given = false;                        // the key was present
-  double mean_samples_between_false = 5000;  // > 100, all kinds and directions together
-};
-
 struct PanelInput {
   std::vector<std::size_t> channels;  // indices into Settings::channels, in the panel's order
   PanelSettings core;                 // name, horizons and all that the core needs
-  AlertSettings alerts;
 };
 
 struct FeedSettings {

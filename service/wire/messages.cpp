@@ -115,6 +115,7 @@ std::string estimate_topic(const PanelDescription& panel, std::uint32_t horizon)
 }
 
 std::string flag_topic(const PanelDescription& panel) { return "flag/" + panel.name; }
+std::string alert_topic(const PanelDescription& panel) { return "alert/" + panel.name; }
 
 std::string encode_estimate(const EstimateRecord& record, const PanelDescription& panel,
                             std::uint64_t epoch, std::uint32_t number) {

@@ -33,6 +33,7 @@ std::string encode_estimate(const EstimateRecord& record, const PanelDescription
 Result<EstimateRecord> decode_estimate(const View& view);
 
 std::string flag_topic(const PanelDescription& panel);
+std::string alert_topic(const PanelDescription& panel);
 
 // JSON payloads. hello: who sends which channels. welcome: the next sequence expected.
 struct Hello {

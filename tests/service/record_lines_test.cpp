@@ -95,7 +95,7 @@ TEST(RecordLines, FlagHasTheseBytes) {
   EXPECT_EQ(
       line_of(record),
       R"({"sequence":9,"time":"1969-12-31T23:59:59.999999999Z","panel":"metals","horizon":"slow",)"
-      R"("distance":51.5,"p_value":2.5e-05,"severity":"severe","flagged":3,)"
+      R"("distance":51.5,"p_value":2.5e-05,"joint_p_value":0,"rank_p_value":0,"severity":"severe","flagged":3,)"
       R"("flagged_expected":0.75,"channels":[{"name":"tin",)"
       R"("value":-0.25,"residual":-7.5,"share":51.25,"p_value":4.5e-05},{"name":"copper",)"
       R"("value":0.5,"residual":null,"share":0.25,"p_value":0.75}]})"

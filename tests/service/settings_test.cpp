@@ -75,13 +75,12 @@ TEST(Settings, ReadsEveryKeyOfTheExample) {
   EXPECT_EQ(panel.horizons[1].tolerance, 1e-10);
   EXPECT_EQ(panel.flags.rate, 0.001);
   EXPECT_EQ(panel.flags.severe_rate, 0.0001);
-  EXPECT_EQ(settings.panels[0].alerts.mean_samples_between_false, 5000);
+  EXPECT_EQ(settings.panels[0].core.alerts.mean_samples_between_false, 5000);
   EXPECT_EQ(settings.publish_address, "tcp://127.0.0.1:7702");
   EXPECT_EQ(settings.control_address, "tcp://127.0.0.1:7703");
   EXPECT_EQ(settings.store_directory, "state");
   EXPECT_EQ(settings.page_address, "127.0.0.1:7780");
-  EXPECT_EQ(not_used(settings),
-            (std::vector<std::string>{"control", "store", "page", "panels.metals.alerts"}));
+  EXPECT_EQ(not_used(settings), (std::vector<std::string>{"control", "store", "page"}));
 }
 
 TEST(Settings, ReadsMemoriesInSamplesAndInTime) {
@@ -330,9 +329,7 @@ TEST(Settings, ExplainSaysWhatIsNotUsedAndWhatIsUnwise) {
   Settings settings = good_settings("window: 500", "window: 9");
   settings.publish_address.reset();
   const std::string text = explain(settings);
-  EXPECT_NE(
-      text.find("\nnot used by this version\n  control\n  store\n  page\n  panels.metals.alerts"),
-      text.npos);
+  EXPECT_NE(text.find("\nnot used by this version\n  control\n  store\n  page"), text.npos);
   EXPECT_NE(text.find("panel metals, horizon slow: 9 samples for 2 channels make a noisy scatter; "
                       "10 or more are better"),
             text.npos);

@@ -3,8 +3,11 @@
 #include <gtest/gtest.h>
 #include <signal.h>
 
+#include <algorithm>
 #include <chrono>
+#include <cmath>
 #include <cstdio>
+#include <cstdlib>
 #include <nlohmann/json.hpp>
 #include <sstream>
 
@@ -54,11 +57,16 @@ std::string eu_settings(const Folder& folder) {
          "      - {name: short, window: 120}\n";
 }
 
-std::vector<std::string> lines_of(const std::string& text, bool flags) {
+enum class Line { estimate, flag, alert };
+
+std::vector<std::string> lines_of(const std::string& text, Line wanted) {
   std::vector<std::string> lines;
   std::istringstream in(text);
   for (std::string line; std::getline(in, line);) {
-    if ((line.find("\"severity\"") != std::string::npos) == flags) lines.push_back(line);
+    const Line kind = line.find("\"severity\"") != std::string::npos ? Line::flag
+                      : line.find("\"stage\"") != std::string::npos  ? Line::alert
+                                                                     : Line::estimate;
+    if (kind == wanted) lines.push_back(line);
   }
   return lines;
 }
@@ -77,14 +85,19 @@ TEST(Live, MatchesReplayToTheByteAndR) {
       << err;
   const std::string estimates = system_test::read_file(folder.path("replay/estimates.jsonl"));
   const std::string flags = system_test::read_file(folder.path("replay/flags.jsonl"));
-  const std::vector<std::string> replayed = lines_of(estimates, false);
-  const std::vector<std::string> replayed_flags = lines_of(flags, true);
+  const std::string alerts = system_test::read_file(folder.path("replay/alerts.jsonl"));
+  const std::vector<std::string> replayed = lines_of(estimates, Line::estimate);
+  const std::vector<std::string> replayed_flags = lines_of(flags, Line::flag);
+  const std::vector<std::string> replayed_alerts = lines_of(alerts, Line::alert);
   ASSERT_EQ(replayed.size(), 3u * 1859u);
+  EXPECT_FALSE(replayed_flags.empty());
+  EXPECT_FALSE(replayed_alerts.empty());
 
   Process daemon({"run", folder.path("eu.yaml")}, folder.path("run.out"), folder.path("run.err"));
   ASSERT_TRUE(wait_for_text(folder.path("run.err"), "publishing at", 10));
   Process tap({"tap", "ipc://" + folder.path("out.sock"), "--json", "--count",
-               std::to_string(replayed.size() + replayed_flags.size()), "--patience", "20"},
+               std::to_string(replayed.size() + replayed_flags.size() + replayed_alerts.size()),
+               "--patience", "20"},
               folder.path("tap.out"), folder.path("tap.err"));
   ASSERT_TRUE(wait_for_text(folder.path("tap.err"), "connected", 10));
   ASSERT_EQ(run({"send", "ipc://" + folder.path("in"), "--from", folder.path("eu.csv")}, out, err),
@@ -93,15 +106,16 @@ TEST(Live, MatchesReplayToTheByteAndR) {
   EXPECT_NE(out.find("1859 samples acknowledged"), std::string::npos) << out;
   ASSERT_EQ(tap.wait(60), 0) << folder.read("tap.err");
   const std::string live = folder.read("tap.out");
-  EXPECT_EQ(lines_of(live, false), replayed);
-  EXPECT_EQ(lines_of(live, true), replayed_flags);
+  EXPECT_EQ(lines_of(live, Line::estimate), replayed);
+  EXPECT_EQ(lines_of(live, Line::flag), replayed_flags);
+  EXPECT_EQ(lines_of(live, Line::alert), replayed_alerts);
 
   daemon.signal(SIGTERM);
   EXPECT_EQ(daemon.wait(1), 0);
 
   // Figures in the live lines: S11 of the sliding window and of the half-life, a distance's
   // p-value.
-  for (const std::string& line : lines_of(live, false)) {
+  for (const std::string& line : lines_of(live, Line::estimate)) {
     const nlohmann::json record = nlohmann::json::parse(line);
     const auto sequence = record["sequence"].get<int>();
     const std::string horizon = record["horizon"];
@@ -173,6 +187,43 @@ TEST(Live, RefusesSamplesAndChangesNothing) {
   folder.write("other.csv", "time,dax,smi,cac,nikkei\n3000,1,2,3,4\n");
   EXPECT_EQ(run({"send", in, "--from", folder.path("other.csv")}, out, err), 69);
   EXPECT_NE(err.find("'nikkei' is not in the settings"), std::string::npos) << err;
+}
+
+// The reader printed on the wire's page, as it stands there, against a running daemon.
+TEST(Live, PythonReaderOfThePageReadsTheWire) {
+  const std::string page =
+      system_test::read_file(std::string(TAILWEIR_SOURCE_DIR) + "/service/wire/README.md");
+  const std::size_t begin = page.find("```python\n");
+  ASSERT_NE(begin, std::string::npos);
+  const std::string reader = page.substr(begin + 10, page.find("```", begin + 10) - begin - 10);
+  EXPECT_LE(std::count(reader.begin(), reader.end(), '\n'), 30);
+  const Folder folder;
+  folder.write("reader.py", reader);
+  folder.write("eu.csv", eu_recording(300));
+  folder.write("eu.yaml", eu_settings(folder));
+  Process daemon({"run", folder.path("eu.yaml")}, folder.path("run.out"), folder.path("run.err"));
+  ASSERT_TRUE(wait_for_text(folder.path("run.err"), "publishing at", 10));
+  const std::string command = "timeout 60 /usr/bin/python3 " + folder.path("reader.py") +
+                              " ipc://" + folder.path("out.sock") + " 60 > " +
+                              folder.path("py.out") + " 2> " + folder.path("py.err") + " &";
+  ASSERT_EQ(std::system(command.c_str()), 0);
+  // The reader needs a moment to subscribe: send until it has had enough.
+  std::string out, err;
+  for (int round = 0; round < 40; ++round) {
+    std::string text = "time,dax,smi,cac,ftse\n";
+    for (int k = 0; k < 50; ++k) {
+      text += std::to_string((round * 50 + k + 1) * 1000000000LL) + "," +
+              std::to_string(std::sin(k * 1.7)) + "," + std::to_string(std::cos(k * 2.9)) + "," +
+              std::to_string(std::sin(k * .3)) + "," + std::to_string(std::cos(k * k * .7)) + "\n";
+    }
+    folder.write("part.csv", text);
+    ASSERT_EQ(
+        run({"send", "ipc://" + folder.path("in"), "--from", folder.path("part.csv")}, out, err), 0)
+        << err;
+    if (wait_for_text(folder.path("py.out"), "estimate/", .2)) break;
+  }
+  EXPECT_TRUE(wait_for_text(folder.path("py.out"), "estimate/indices/window", 5))
+      << folder.read("py.err");
 }
 
 TEST(CommandLine, AnswersMistakesInOneLine) {
