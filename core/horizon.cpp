@@ -45,7 +45,9 @@ Horizon::Horizon(const PanelSettings& panel, const HorizonSettings& settings)
       workspace_(tracker_.view_mass().size()),
       centred_(panel.channels),
       q_(panel.channels),
-      diagonal_(panel.channels) {
+      diagonal_(panel.channels),
+      complete_mass_(tracker_.view_mass().size()) {
+  observed_.reserve(static_cast<std::size_t>(panel.channels));
   estimate_.nu = estimate_.nu_low = estimate_.nu_high = kNaN;
   estimate_.nu_fit = estimate_.covariance_factor = estimate_.log_volatility = kNaN;
   estimate_.residual = estimate_.distance = estimate_.p_value = estimate_.condition = kNaN;
@@ -66,8 +68,11 @@ Horizon::Horizon(const PanelSettings& panel, const HorizonSettings& settings)
 bool Horizon::push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time_ns, Flag& flag) {
   estimate_.distance = tracker_.predict(x, time_ns);
   estimate_.p_value =
-      has_nu_ ? student::tail_probability(estimate_.distance, static_cast<double>(p_), nu_.nu)
-              : kNaN;
+      has_nu_
+          ? student::tail_probability(
+                estimate_.distance,
+                static_cast<double>(p_ - static_cast<Index>(tracker_.missing_now().size())), nu_.nu)
+          : kNaN;
   changed_.clear();
   const bool flagged = has_nu_ && std::isfinite(estimate_.distance) && score(x, flag);
   tracker_.absorb();
@@ -87,12 +92,24 @@ bool Horizon::push(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time
 // Scores the sample of the last predict(); fills the flag and returns true when it is rare.
 bool Horizon::score(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag) {
   tracker_.residuals(q_, diagonal_);
-  const detect::ScoredSample sample{estimate_.distance, centred_, q_, diagonal_, nullptr};
+  // What was observed moves to the front.
+  const std::vector<Index>& missing = tracker_.missing_now();
+  observed_.clear();
+  for (Index j = 0; j < p_; ++j) {
+    if (!std::binary_search(missing.begin(), missing.end(), j)) observed_.push_back(j);
+  }
+  const Index n = static_cast<Index>(observed_.size());
+  for (Index k = 0; k < n; ++k) {
+    q_(k) = q_(observed_[static_cast<std::size_t>(k)]);
+    diagonal_(k) = diagonal_(observed_[static_cast<std::size_t>(k)]);
+  }
+  const detect::ScoredSample sample{estimate_.distance, centred_.head(n), q_.head(n),
+                                    diagonal_.head(n), n < p_ ? observed_.data() : nullptr};
   const detect::ScatterKnowledge known{tracker_.health().samples_effective, nu_.nu,
                                        centre_.kind == CentreKind::estimated};
   const bool stale = repeats_.stale(x);
   const detect::FlagScore score = flags_.score(sample, known, !stale);
-  watch(stale);
+  watch(stale || n < p_);
   if (score.level == detect::FlagLevel::usual) return false;
   flag.distance = estimate_.distance;
   flag.p_value = score.combined;
@@ -100,6 +117,7 @@ bool Horizon::score(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag) {
   flag.rank_p_value = score.rank;
   flag.severity = score.level == detect::FlagLevel::severe ? Severity::severe : Severity::unusual;
   tracker_.centred(centred_);
+  for (Index k = 0; k < n; ++k) centred_(k) = centred_(observed_[static_cast<std::size_t>(k)]);
   flags_.attribute(sample, known, kNamed, parts_);
   for (const detect::ChannelPart& part : parts_) {
     flag.channels.push_back(
@@ -164,12 +182,27 @@ void Horizon::refresh_nu() {
 
 tail::NuEstimate Horizon::nu_from_view() {
   const Index n = tracker_.view_size();
-  const tail::FitView fit{tracker_.view_mass().head(n),
+  // Estimators that know complete samples only leave the others out while enough remain.
+  complete_mass_ = tracker_.view_mass().head(n);
+  const double* observed = tracker_.view_observed();
+  if (observed != nullptr && nu_settings_.method != NuMethod::likelihood) {
+    for (Index k = 0; k < n; ++k) {
+      if (observed[k] < static_cast<double>(p_)) complete_mass_(k) = 0;
+    }
+    const double left = complete_mass_.sum();
+    if (left > .3) {
+      complete_mass_ /= left;
+    } else {
+      complete_mass_ = tracker_.view_mass().head(n);
+    }
+  }
+  const tail::FitView fit{complete_mass_,
                           tracker_.view_weight().head(n),
                           tracker_.view_distance().head(n),
                           p_,
                           tracker_.view_nu(),
-                          centre_.kind == CentreKind::estimated};
+                          centre_.kind == CentreKind::estimated,
+                          observed};
   if (workspace_.delta.size() < n) workspace_ = tail::Workspace(2 * n);
   switch (nu_settings_.method) {
     case NuMethod::likelihood:
@@ -234,6 +267,7 @@ void Horizon::publish() {
   estimate_.iterations = health.iterations;
   estimate_.since_polish = health.since_polish;
   estimate_.samples_effective = health.samples_effective;
+  estimate_.coverage = tracker_.coverage();
   estimate_.nu_status = nu_.status;
   switch (tracker_.state()) {
     case TrackerState::filling:

@@ -61,6 +61,8 @@ class Horizon {
   tail::Workspace workspace_;
   Estimate estimate_;
   Eigen::VectorXd centred_, q_, diagonal_;
+  Eigen::ArrayXd complete_mass_;  // of the view, without samples that miss entries
+  std::vector<Index> observed_;
   std::vector<detect::ChannelPart> parts_;
 };
 

@@ -39,6 +39,12 @@ class Precision {
   // P(i, j), i >= j. Precondition: nothing is queued (after multiply or settle).
   double entry(Index i, Index j) const { return data_[static_cast<std::size_t>(j * stride_ + i)]; }
 
+  // The lower triangle in place, dimension x dimension; what lies above it is unspecified.
+  // Precondition: nothing is queued.
+  Eigen::Map<const Eigen::MatrixXd, 0, Eigen::OuterStride<>> view() const {
+    return {data_.data(), dimension_, dimension_, Eigen::OuterStride<>(stride_)};
+  }
+
   // Writes the lower triangle to a dimension x dimension matrix. Precondition: nothing is queued.
   void copy_to(spd::MatrixRef lower) const;
   // Takes the lower triangle of a dimension x dimension matrix; forgets what was queued.

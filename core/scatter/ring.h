@@ -9,6 +9,7 @@
 // outgrows it. Thread rule: one owner.
 #pragma once
 
+#include <Eigen/Core>
 #include <cassert>
 #include <cstdint>
 #include <vector>
@@ -16,6 +17,14 @@
 #include "core/settings.h"
 
 namespace tailweir {
+
+// What a sample with missing entries left in A beside its outer product: f C C' on the missing
+// entries (missing_sample.h). Empty for complete samples, which is nearly always.
+struct PartialSample {
+  std::vector<Index> missing;
+  Eigen::MatrixXd factor;  // C, |m| x |m|
+  double f = 0;
+};
 
 class SampleRing {
  public:
@@ -31,6 +40,7 @@ class SampleRing {
   // Opens the next slot and returns its position. The sample's values are unspecified.
   std::int64_t append() {
     if (size() + 1 + slack_ > capacity_) grow();
+    partial_[at(end_)].missing.clear();
     return end_++;
   }
   void drop_oldest() {
@@ -51,6 +61,9 @@ class SampleRing {
   double distance(std::int64_t position) const { return distance_[at(position)]; }
   std::int64_t& time(std::int64_t position) { return time_[at(position)]; }
   std::int64_t time(std::int64_t position) const { return time_[at(position)]; }
+
+  PartialSample& partial(std::int64_t position) { return partial_[at(position)]; }
+  const PartialSample& partial(std::int64_t position) const { return partial_[at(position)]; }
 
   // How many samples from `position` on lie side by side in memory, at most `wanted`.
   Index contiguous(std::int64_t position, Index wanted) const {
@@ -76,6 +89,7 @@ class SampleRing {
     weight_[1].assign(n, 0.0);
     distance_.assign(n, 0.0);
     time_.assign(n, 0);
+    partial_.assign(n, {});
   }
 
   // Doubles the room; samples keep their positions.
@@ -91,6 +105,7 @@ class SampleRing {
       bigger.weight(k, 1) = weight(k, 1);
       bigger.distance(k) = distance(k);
       bigger.time(k) = time(k);
+      bigger.partial(k) = partial(k);
     }
     *this = std::move(bigger);
   }
@@ -99,6 +114,7 @@ class SampleRing {
   std::int64_t begin_ = 0, end_ = 0;
   std::vector<double> x_, omega_, weight_[2], distance_;
   std::vector<std::int64_t> time_;
+  std::vector<PartialSample> partial_;
 };
 
 }  // namespace tailweir

@@ -69,6 +69,18 @@ Index slack_for(Index dimension, Index room) {
   return static_cast<Index>(16 + 6 * work / 2e6);
 }
 
+// a <- a + scale f C C' on the missing entries, lower triangle.
+void add_conditional(const PartialSample& partial, double scale, Eigen::MatrixXd& a) {
+  const Eigen::MatrixXd part = scale * partial.f * partial.factor * partial.factor.transpose();
+  const Index m = static_cast<Index>(partial.missing.size());
+  for (Index k = 0; k < m; ++k) {
+    for (Index l = k; l < m; ++l) {  // missing rises: (l, k) is in the lower triangle
+      a(partial.missing[static_cast<std::size_t>(l)],
+        partial.missing[static_cast<std::size_t>(k)]) += part(l, k);
+    }
+  }
+}
+
 }  // namespace
 
 Tracker::Tracker(const TrackerSettings& settings, double nu)
@@ -84,6 +96,8 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
       offset_(Eigen::VectorXd::Zero(p_)),
       unit_(Eigen::VectorXd::Ones(p_)),
       shift_(Eigen::VectorXd::Zero(p_)),
+      missing_(dimension_),
+      missing_counts_(static_cast<std::size_t>(p_), 0),
       polish_(dimension_, lift_),
       scratch_(dimension_, dimension_),
       block_(p_, p_),
@@ -96,6 +110,8 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
   x_old_.assign(padded, 0);
   y_old_.assign(padded, 0);
   const Index room = room_for(settings, kept_half_lives_);
+  padded_column_.assign(padded, 0);
+  missing_now_.reserve(static_cast<std::size_t>(p_));
   scratch_values_.assign(static_cast<std::size_t>(room), 0);
   columns_.resize(dimension_, 64);
   if (is_half_life(settings.memory.kind)) tail_.setZero(dimension_, dimension_);
@@ -103,6 +119,7 @@ Tracker::Tracker(const TrackerSettings& settings, double nu)
   view_mass_.resize(room);
   view_weight_.resize(room);
   view_distance_.resize(room);
+  view_observed_.resize(room);
   good_.resize(dimension_, dimension_);
   good_offset_ = offset_;
   good_unit_ = unit_;
@@ -152,8 +169,13 @@ double Tracker::dot(const std::vector<double>& a, const double* b) const {
 
 void Tracker::lift_into(const Eigen::Ref<const Eigen::VectorXd>& x) {
   double largest = 0;
+  missing_now_.clear();
   for (Index j = 0; j < p_; ++j) {
-    const double value = (x(j) - offset_(j)) / unit_(j);
+    double value = (x(j) - offset_(j)) / unit_(j);
+    if (std::isnan(value)) {
+      missing_now_.push_back(j);
+      value = 0;
+    }
     x_[static_cast<std::size_t>(j)] = value;
     largest = std::max(largest, std::abs(value));
   }
@@ -197,7 +219,9 @@ double Tracker::predict(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t
   departing_ = leaving(time_ns);
   probe_ = -1;
   if (!tracking()) return kNaN;
-  if (departing_ > 0) {
+  if (!missing_now_.empty()) {
+    q_new_ = multiply_new();
+  } else if (departing_ > 0) {
     const double* old = ring_.x(ring_.begin());
     std::copy(old, old + x_old_.size(), x_old_.begin());
     precision_.multiply(x_.data(), y_.data(), x_old_.data(), y_old_.data());
@@ -211,7 +235,7 @@ double Tracker::predict(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t
       precision_.multiply(x_.data(), y_.data());
     }
   }
-  q_new_ = dot(x_, y_.data());
+  if (missing_now_.empty()) q_new_ = dot(x_, y_.data());
   const double d = (q_new_ * total_ - static_cast<double>(lift_)) / (shrink_ * shrink_);
   // A distance below zero is rounding; one that is not a number asks for a rebuild.
   if (!std::isfinite(q_new_)) rebuild_wanted_ = true;
@@ -241,7 +265,7 @@ void Tracker::absorb() {
     if (!(exponent < 400) || (exponent > 60 && !polish_.active())) renormalise();
   }
   if (!tracking()) {
-    for (Index k = 0; k < departing_; ++k) ring_.drop_oldest();
+    for (Index k = 0; k < departing_; ++k) drop_oldest();
     take_slot();
     recount();
     start_if_ready();
@@ -255,9 +279,20 @@ void Tracker::absorb() {
     const double u = (p + nu) / (nu + std::max(q * total_, 0.));
     gauge_.observe(std::log(u * total_ / (mass_ * ring_.weight(probe_, current_))));
   }
-  if (departing_ > 0) remove_first();
-  enter();
-  remove_others();
+  bool partial = !missing_now_.empty();
+  for (Index k = 0; k < departing_; ++k) {
+    partial = partial || !ring_.partial(ring_.begin() + k).missing.empty();
+  }
+  if (partial) {
+    polish_.abandon();
+    for (Index k = 0; k < departing_; ++k) remove_one();
+    enter_slowly();
+    refresh_log_det();
+  } else {
+    if (departing_ > 0) remove_first();
+    enter();
+    remove_others();
+  }
   ++health_.since_polish;
   check_samples_left();
   if (tracking()) {
@@ -276,6 +311,12 @@ void Tracker::take_slot() {
   std::copy(x_.begin(), x_.end(), ring_.x(position));
   ring_.time(position) = time_;
   ring_.omega(position) = omega_of(position, time_);
+  if (missing_now_.empty()) return;
+  PartialSample& partial = ring_.partial(position);
+  partial.missing = missing_now_;
+  partial.f = 0;
+  ++partials_;
+  for (const Index j : missing_now_) ++missing_counts_[static_cast<std::size_t>(j)];
 }
 
 // The oldest sample leaves with exactly what it brought; y_ and q_new_ become those of the new
@@ -292,7 +333,7 @@ void Tracker::remove_first() {
   const double h = a * q_old_;
   const double limit = std::min(.9, 3 * (p + nu) * omega / mass_);
   if (!(h < limit)) rebuild_wanted_ = true;
-  ring_.drop_oldest();
+  drop_oldest();
   if (!(h < .999)) return;  // the rebuild starts from the ring
   const double g = a / (1 - h);
   precision_.add(g, y_old_.data());
@@ -348,7 +389,7 @@ void Tracker::remove_others() {
     const double h = a * dot(x_old_, y_old_.data());
     mass_ -= ring_.omega(oldest);
     mass_square_ -= ring_.omega(oldest) * ring_.omega(oldest);
-    ring_.drop_oldest();
+    drop_oldest();
     if (!(h < .9)) {
       rebuild_wanted_ = true;
       continue;
@@ -392,6 +433,7 @@ void Tracker::renormalise() {
   const double f = std::exp2(shift / settings_.memory.length);
   for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
     ring_.omega(k) = omega_of(k, ring_.time(k));
+    ring_.partial(k).f *= f;
   }
   tail_ *= f;
   tail_total_ *= f;
@@ -406,7 +448,7 @@ void Tracker::renormalise() {
     departing_ = 0;
     tail_.setZero();
     tail_total_ = tail_mass_ = tail_square_ = 0;
-    ring_.clear();
+    while (ring_.size() > 0) drop_oldest();
     return;
   }
   precision_.scale(1 / f);
@@ -432,7 +474,9 @@ void Tracker::retire_tail() {
     tail_total_ += a;
     tail_mass_ += omega;
     tail_square_ += omega * omega;
-    ring_.drop_oldest();
+    const PartialSample& partial = ring_.partial(oldest);
+    if (partial.f > 0) add_conditional(partial, normal, tail_);
+    drop_oldest();
     if (count == columns_.cols()) {
       spd::add_gram(1, columns_, 1, tail_);
       count = 0;
@@ -459,6 +503,13 @@ void Tracker::start_if_ready() {
   for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
     const Eigen::Map<const Eigen::VectorXd> x(ring_.x(k), dimension_);
     ring_.weight(k, current_) = (d + nu) / (nu + x.squaredNorm());
+    PartialSample& partial = ring_.partial(k);
+    if (partial.missing.empty()) continue;
+    // Before anything is known: the centre of the channel, with the spread its unit stands for.
+    const Index m = static_cast<Index>(partial.missing.size());
+    for (const Index j : partial.missing) ring_.x(k)[j] = 0;
+    partial.factor = Eigen::MatrixXd::Identity(m, m) * std::sqrt(2.);
+    partial.f = ring_.omega(k);
   }
   tail_total_ = tail_mass_ = tail_square_ = 0;
   if (tail_.size() > 0) tail_.setZero();
@@ -479,23 +530,27 @@ void Tracker::choose_units() {
   if (static_cast<Index>(scratch_values_.size()) < n)
     scratch_values_.resize(2 * static_cast<std::size_t>(n));
   const auto first = scratch_values_.begin();
-  const auto middle = first + n / 2;
-  const auto last = first + n;
   for (Index j = 0; j < p_; ++j) {
     const double old_unit = unit_(j);
     const double old_offset = offset_(j);
     double size = 0;
+    Index seen = 0;
     for (Index k = 0; k < n; ++k) {
-      first[k] = ring_.x(ring_.begin() + k)[j] * old_unit + old_offset;
+      const std::vector<Index>& missing = ring_.partial(ring_.begin() + k).missing;
+      if (std::find(missing.begin(), missing.end(), j) != missing.end()) continue;
+      first[seen++] = ring_.x(ring_.begin() + k)[j] * old_unit + old_offset;
     }
+    if (seen == 0) continue;  // never observed: stays as it is
+    const auto middle = first + seen / 2;
+    const auto last = first + seen;
     if (lift_ == 1) {
       std::nth_element(first, middle, last);
       offset_(j) = *middle;
     }
     double sum = 0;
-    for (Index k = 0; k < n; ++k) {
-      first[k] = std::abs(ring_.x(ring_.begin() + k)[j] * old_unit + (old_offset - offset_(j)));
-      sum += first[k] / static_cast<double>(n);
+    for (auto value = first; value != last; ++value) {
+      *value = std::abs(*value - offset_(j));
+      sum += *value / static_cast<double>(seen);
     }
     std::nth_element(first, middle, last);
     size = *middle > 0 ? *middle : sum;
@@ -527,6 +582,7 @@ bool Tracker::build() {
   for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
     const double a = ring_.omega(k) * ring_.weight(k, current_);
     total_ += a;
+    if (ring_.partial(k).f > 0) add_conditional(ring_.partial(k), 1, scratch_);
     columns_.col(count++) =
         std::sqrt(a) * Eigen::Map<const Eigen::VectorXd>(ring_.x(k), dimension_);
     if (count == columns_.cols() || k + 1 == ring_.end()) {
@@ -575,19 +631,23 @@ void Tracker::polish_if_due() {
   if (polish_.active()) {
     polish_.step(ring_, tail_);
     if (polish_.stage() == Polish::Stage::failed) return rebuild();
-    if (polish_.stage() == Polish::Stage::done) adopt();
+    if (polish_.stage() == Polish::Stage::done) take_polish();
     return;
   }
   health_.samples_effective = mass_ * mass_ / mass_square_;
   const double n = health_.samples_effective;
   // While the memory still fills, five polishes a doubling keep up with it.
-  const double interval = departing_ > 0 || is_half_life(settings_.memory.kind) ? n : n / 5;
+  // Imputations go stale faster than weights.
+  const bool sparse = 20 * partials_ > ring_.size();
+  const bool full = departing_ > 0 || is_half_life(settings_.memory.kind);
+  const double interval = !full ? n / 5 : sparse ? n / 4 : n;
   const bool due = exact() || static_cast<double>(health_.since_polish) >= interval ||
                    gauge_.estimate(n, health_.since_polish) > tolerance();
   if (!due) return;
   retire_tail();
   recount();
-  const bool at_once = exact() || Polish::cost(dimension_, ring_.size(), tail_mass_ > 0) <= kOneGo;
+  const bool at_once =
+      exact() || partials_ > 0 || Polish::cost(dimension_, ring_.size(), tail_mass_ > 0) <= kOneGo;
   if (!at_once) {
     polish_.start(precision_, ring_,
                   {total_, mass_, nu_ - static_cast<double>(lift_), static_cast<double>(dimension_),
@@ -604,6 +664,7 @@ void Tracker::polish_if_due() {
 
 // One whole iteration at once. False when it failed; the tracker has then been rebuilt or stopped.
 bool Tracker::iterate() {
+  if (partials_ > 0) return iterate_whole();
   const double before = health_.iterations > 0 ? health_.residual_at_polish : 0;
   polish_.start(precision_, ring_,
                 {total_, mass_, nu_ - static_cast<double>(lift_), static_cast<double>(dimension_),
@@ -617,25 +678,30 @@ bool Tracker::iterate() {
   if (exact() && before > 1e-11 && now > 0) {  // two in a row show what an iteration leaves
     contraction_ += .2 * (std::clamp(now / before, .02, .6) - contraction_);
   }
-  adopt();
+  take_polish();
   return tracking();
 }
 
-void Tracker::adopt() {
+void Tracker::take_polish() {
   swap(precision_, polish_.precision());
   current_ = 1 - current_;
   total_ = polish_.total();
   log_det_ = polish_.log_det();
-  const double found = polish_.residual();
+  adopt({polish_.residual(), polish_.centre_residual(), polish_.condition(), polish_.first(),
+         polish_.last(), polish_.from().nu + static_cast<double>(lift_)});
+}
+
+void Tracker::adopt(const Finished& finished) {
+  const double found = finished.residual;
   const double left =
       health_.iterations == 0
           ? first_contraction(static_cast<double>(p_), is_half_life(settings_.memory.kind))
           : contraction_;
-  after_ = left * std::max(found, polish_.centre_residual());
-  gauge_.polished(found, left * found, health_.since_polish - (ring_.end() - polish_.last()));
-  health_.residual_at_polish = std::max(found, polish_.centre_residual());
-  health_.since_polish = ring_.end() - polish_.last();
-  health_.condition = polish_.condition();
+  after_ = left * std::max(found, finished.centre_residual);
+  gauge_.polished(found, left * found, health_.since_polish - (ring_.end() - finished.last));
+  health_.residual_at_polish = std::max(found, finished.centre_residual);
+  health_.since_polish = ring_.end() - finished.last;
+  health_.condition = finished.condition;
   ++health_.polishes;
   ++health_.iterations;
   if (health_.condition > kWorstCondition) return fail(TrackerState::ill_conditioned);
@@ -659,9 +725,9 @@ void Tracker::adopt() {
   good_offset_ = offset_;
   good_unit_ = unit_;
   // What the iteration left per sample; those that left meanwhile are nobody's business any more.
-  fit_nu_ = polish_.from().nu + static_cast<double>(lift_);
-  const double p = static_cast<double>(p_);
-  for (std::int64_t k = std::max(polish_.first(), ring_.begin()); k < polish_.last(); ++k) {
+  fit_nu_ = finished.nu;
+  for (std::int64_t k = std::max(finished.first, ring_.begin()); k < finished.last; ++k) {
+    const double p = static_cast<double>(observed(k));
     ring_.distance(k) = std::max((p + fit_nu_) / ring_.weight(k, current_) - fit_nu_, 0.);
   }
   fill_view(fit_nu_);
@@ -673,14 +739,16 @@ void Tracker::fill_view(double nu) {
     view_mass_.resize(2 * n);
     view_weight_.resize(2 * n);
     view_distance_.resize(2 * n);
+    view_observed_.resize(2 * n);
   }
   view_size_ = n;
   view_first_ = ring_.begin();
   view_nu_ = nu;
-  const double p = static_cast<double>(p_);
   double sum = 0;
   for (Index k = 0; k < n; ++k) {
     const std::int64_t position = view_first_ + k;
+    const double p = static_cast<double>(observed(position));
+    view_observed_(k) = p;
     view_mass_(k) = ring_.omega(position);
     sum += view_mass_(k);
     view_distance_(k) = ring_.distance(position);
@@ -730,8 +798,14 @@ void Tracker::residuals(Eigen::Ref<Eigen::VectorXd> q,
   assert(tracking());
   for (Index j = 0; j < p_; ++j) {
     q(j) = total_ * y_[static_cast<std::size_t>(j)] / (unit_(j) * shrink_);
-    precision_diagonal(j) = total_ * precision_.entry(j, j) / (unit_(j) * unit_(j));
+    precision_diagonal(j) = precision_.entry(j, j);
   }
+  if (!missing_now_.empty()) {  // P_jj less what the missing ones explain
+    const Eigen::Ref<const Eigen::MatrixXd> v = missing_.update();
+    for (Index j = 0; j < p_; ++j) precision_diagonal(j) -= v.row(j).squaredNorm();
+  }
+  for (Index j = 0; j < p_; ++j) precision_diagonal(j) *= total_ / (unit_(j) * unit_(j));
+  for (const Index j : missing_now_) precision_diagonal(j) = 1;
 }
 
 void Tracker::centred(Eigen::Ref<Eigen::VectorXd> x) const {

@@ -22,6 +22,7 @@
 #include <vector>
 
 #include "core/scatter/gauge.h"
+#include "core/scatter/missing_sample.h"
 #include "core/scatter/polish.h"
 #include "core/scatter/precision.h"
 #include "core/scatter/ring.h"
@@ -64,11 +65,18 @@ class Tracker {
   // nu: first value the fixed point is taken at (> 1 when the centre is estimated).
   Tracker(const TrackerSettings& settings, double nu);
 
-  // Looks at the next sample without taking it: x holds p finite values, |x| <= 1e150; time_ns is
-  // not before the last one's. Returns its squared Mahalanobis distance, NaN unless tracking().
+  // Looks at the next sample without taking it: x holds p values, |x| <= 1e150, not-a-number where
+  // an entry is missing (at least one is observed); time_ns is not before the last one's. Returns
+  // its squared Mahalanobis distance, NaN unless tracking().
   double predict(const Eigen::Ref<const Eigen::VectorXd>& x, std::int64_t time_ns);
   // Takes the sample of the last predict().
   void absorb();
+
+  // Entries missing from the sample of the last predict(), rising; and how much of the memory was
+  // observed: the share of all entries in the ring, and of each channel's.
+  const std::vector<Index>& missing_now() const { return missing_now_; }
+  double coverage() const;
+  double coverage(Index channel) const;
 
   bool tracking() const { return state_ == TrackerState::tracking; }
   TrackerState state() const { return state_; }
@@ -89,6 +97,8 @@ class Tracker {
   const Eigen::ArrayXd& view_mass() const { return view_mass_; }
   const Eigen::ArrayXd& view_weight() const { return view_weight_; }
   const Eigen::ArrayXd& view_distance() const { return view_distance_; }
+  // |o| of each, or nullptr when all are complete.
+  const double* view_observed() const { return partials_ > 0 ? view_observed_.data() : nullptr; }
   double view_nu() const { return view_nu_; }
   // nu of the last finished iteration: the one the scatter is the fixed point of.
   double fit_nu() const { return fit_nu_; }
@@ -119,6 +129,13 @@ class Tracker {
   void start_if_ready();
   void choose_units();
   void remove_first();
+  void remove_one();
+  void drop_oldest();
+  void enter_slowly();
+  double multiply_new();
+  void refresh_log_det();
+  bool iterate_whole();
+  Index observed(std::int64_t position) const;
   void remove_others();
   void enter();
   void probe();
@@ -134,7 +151,15 @@ class Tracker {
   void polish_if_due();
   bool iterate();
   void fill_view(double nu);
-  void adopt();
+  // How an iteration ended: distance before it, of scatter and centre; condition; samples it saw;
+  // nu.
+  struct Finished {
+    double residual, centre_residual, condition;
+    std::int64_t first, last;
+    double nu;
+  };
+  void adopt(const Finished& finished);
+  void take_polish();
   void update_health();
   double unequal_masses() const;
   double statistical_error() const;
@@ -175,6 +200,12 @@ class Tracker {
   std::int64_t taken_ = 0;  // samples ever taken
   int unsettled_ = 0;       // polishes in a row that found the state far off
 
+  MissingSample missing_;
+  std::vector<Index> missing_now_;
+  Index partials_ = 0;                 // samples of the ring with missing entries
+  std::vector<Index> missing_counts_;  // of each channel, in the ring
+  std::vector<double> padded_column_;
+
   Polish polish_;
   Gauge gauge_;
   double contraction_ = .3;  // what a repeated iteration leaves of the distance, learned
@@ -184,7 +215,7 @@ class Tracker {
   Index view_size_ = 0;
   std::int64_t view_first_ = 0;
   double view_nu_ = 0, fit_nu_ = 0;
-  Eigen::ArrayXd view_mass_, view_weight_, view_distance_;
+  Eigen::ArrayXd view_mass_, view_weight_, view_distance_, view_observed_;
 
   Eigen::MatrixXd good_;  // P of the last polish, lower, with its W, offset and units
   double good_total_ = 0;

@@ -12,20 +12,28 @@ namespace {
 // Mean log likelihood of the distances at nu, constants in nu dropped.
 double log_likelihood(const FitView& fit, double nu) {
   const double p = static_cast<double>(fit.channels);
-  double sum = 0;
-  for (Index i = 0; i < fit.mass.size(); ++i) sum += fit.mass(i) * std::log1p(fit.distance(i) / nu);
-  return student::log_density(0, fit.channels, nu, 0) - (p + nu) / 2 * sum;
+  double sum = fit.observed == nullptr ? student::log_density(0, fit.channels, nu, 0) : 0;
+  for (Index i = 0; i < fit.mass.size(); ++i) {
+    const double k = fit.observed == nullptr ? p : fit.observed[i];
+    double part = -(k + nu) / 2 * std::log1p(fit.distance(i) / nu);
+    if (fit.observed != nullptr) part += student::log_density(0, static_cast<Index>(k), nu, 0);
+    sum += fit.mass(i) * part;
+  }
+  return sum;
 }
 
 // Twice its derivative in nu.
 double slope(const FitView& fit, double nu) {
   const double p = static_cast<double>(fit.channels);
-  double sum = 0;
+  double sum = fit.observed == nullptr ? student::digamma_ratio(p, nu) - p / nu : 0;
   for (Index i = 0; i < fit.mass.size(); ++i) {
+    const double k = fit.observed == nullptr ? p : fit.observed[i];
     const double z = fit.distance(i) / nu;
-    sum += fit.mass(i) * ((nu + p) / nu * z / (1 + z) - std::log1p(z));
+    double part = (nu + k) / nu * z / (1 + z) - std::log1p(z);
+    if (fit.observed != nullptr) part += student::digamma_ratio(k, nu) - k / nu;
+    sum += fit.mass(i) * part;
   }
-  return student::digamma_ratio(p, nu) - p / nu + sum;
+  return sum;
 }
 
 }  // namespace

@@ -46,6 +46,8 @@ struct FitView {
   Index channels = 0;                         // p
   double nu0 = 4;                             // nu of the fit
   bool centre_estimated = false;
+  // |o_i|, n values, when entries are missing: for likelihood_step only; nullptr: all p.
+  const double* observed = nullptr;
 };
 
 // Buffers of the leave-one-out pass, sized once for n samples; no allocation after that.

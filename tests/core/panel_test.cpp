@@ -183,5 +183,87 @@ TEST(Panel, SaysWhyItHasNoScatter) {
   EXPECT_TRUE(panel.scatter(0, s, m));
 }
 
+// Log of the air quality data with holes: 366 x 4, eight patterns of missing entries.
+const char* const kNoxHoles =
+    "{data(ambientNOxCH, package='robustbase'); "
+    "as.matrix(log(ambientNOxCH[,c('ad','ef','se','sz')]))}";
+
+// Oracle: observed-data maximum likelihood of the same data (R, computed), nu = 4 and full.
+TEST(Panel, MissingEntriesMatchObservedDataLikelihood) {
+  const Eigen::MatrixXd x = oracles::r_samples(kNoxHoles);
+  ASSERT_EQ(x.cols(), 366);
+  const PanelSettings fixed = eu_panel(Memory::Kind::window_samples, 366, NuMethod::fixed);
+  const auto at_four = run(fixed, x, {366});
+  EXPECT_NEAR(at_four.at(366).scatter(0, 0) / .3399694881, 1, 1e-6);
+  EXPECT_NEAR(at_four.at(366).scatter(3, 3) / .2334601699, 1, 1e-6);
+  EXPECT_LT(at_four.at(366).estimate.coverage, 1);
+  const auto full =
+      run(eu_panel(Memory::Kind::window_samples, 366, NuMethod::likelihood), x, {366});
+  const Snapshot& shot = full.at(366);
+  EXPECT_NEAR(shot.estimate.nu / 9.651873484, 1, 1e-6);
+  const double centre[4] = {3.073125530, 3.914274285, 2.798745742, 2.840680118};
+  for (int j = 0; j < 4; ++j) EXPECT_NEAR(shot.centre(j) / centre[j], 1, 1e-6);
+  const double vech[10] = {.3883584941, .2664119195, .2649059677, .2374953498, .2229670822,
+                           .1607879593, .1388328196, .3492762955, .2643134208, .2571798437};
+  int k = 0;
+  for (int j = 0; j < 4; ++j) {
+    for (int i = j; i < 4; ++i) EXPECT_NEAR(shot.scatter(i, j) / vech[k++], 1, 1e-6);
+  }
+}
+
+// Identity: a window that holes have passed through is the window without them.
+TEST(Panel, RemovalOfPartialSamplesIsExact) {
+  const Eigen::MatrixXd x = oracles::r_samples(oracles::kEuStockReturns).leftCols(700);
+  PanelSettings settings = eu_panel(Memory::Kind::window_samples, 120, NuMethod::fixed);
+  settings.horizons[0].tolerance.reset();  // the tracker's own way, polishes far apart
+  Panel whole(settings), holed(settings);
+  Eigen::MatrixXd a, b;
+  Eigen::VectorXd m;
+  for (Index t = 0; t < x.cols(); ++t) {
+    Eigen::VectorXd y = x.col(t);
+    if (t > 200 && t < 420) {
+      if (t % 3 == 0) y(t % 4) = std::nan("");
+      if (t % 7 == 0) y((t + 1) % 4) = y((t + 2) % 4) = std::nan("");
+    }
+    whole.push(x.col(t), t);
+    holed.push(y, t);
+    ASSERT_EQ(holed.estimate(0).state, HorizonState::live == whole.estimate(0).state
+                                           ? HorizonState::live
+                                           : whole.estimate(0).state)
+        << t;
+    if (t == 400) {
+      EXPECT_LT(holed.estimate(0).coverage, .95);
+    }
+  }
+  EXPECT_EQ(holed.estimate(0).coverage, 1);
+  ASSERT_TRUE(whole.scatter(0, a, m) && holed.scatter(0, b, m));
+  EXPECT_LT((a - b).norm(), .05 * a.norm());  // both within their residuals of the same fixed point
+}
+
+// Property: a channel that falls silent for long leaves the others' estimates alone.
+TEST(Panel, SilentChannelDoesNotPoisonThePanel) {
+  const Eigen::MatrixXd x = oracles::r_samples(oracles::kEuStockReturns).leftCols(900);
+  PanelSettings settings = eu_panel(Memory::Kind::window_samples, 120, NuMethod::fixed);
+  settings.horizons[0].tolerance.reset();
+  Panel four(settings);
+  settings.channels = 3;
+  Panel three(settings);
+  Eigen::MatrixXd a, b;
+  Eigen::VectorXd m;
+  for (Index t = 0; t < x.cols(); ++t) {
+    Eigen::VectorXd y = x.col(t);
+    if (t > 300) y(3) = std::nan("");
+    four.push(y, t);
+    three.push(x.col(t).head(3), t);
+    if (t > 200) {
+      ASSERT_EQ(four.estimate(0).state, HorizonState::live) << t;
+    }
+  }
+  ASSERT_TRUE(four.scatter(0, a, m) && three.scatter(0, b, m));
+  EXPECT_LT((a.topLeftCorner(3, 3) - b).norm(), .1 * b.norm());
+  EXPECT_NEAR(four.estimate(0).distance / three.estimate(0).distance, 1, .1);
+  EXPECT_NEAR(four.estimate(0).coverage, .75, 1e-12);
+}
+
 }  // namespace
 }  // namespace tailweir
