@@ -34,6 +34,8 @@ class Horizon {
   const Estimate& estimate() const { return estimate_; }
   bool scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const { return tracker_.scatter(s, m); }
   const TrackerHealth& health() const { return tracker_.health(); }
+  // Share of a channel's values in the memory that were observed.
+  double coverage(Index channel) const { return tracker_.coverage(channel); }
 
  private:
   bool score(const Eigen::Ref<const Eigen::VectorXd>& x, Flag& flag);

@@ -51,6 +51,10 @@ const Estimate& Panel::estimate(Index h) const {
 const std::vector<Flag>& Panel::flags() const { return body_->flags; }
 const std::vector<HorizonAlert>& Panel::alerts() const { return body_->alerts; }
 
+double Panel::coverage(Index h, Index channel) const {
+  return body_->horizons[static_cast<std::size_t>(h)].coverage(channel);
+}
+
 bool Panel::scatter(Index h, Eigen::MatrixXd& scatter, Eigen::VectorXd& centre) const {
   return body_->horizons[static_cast<std::size_t>(h)].scatter(scatter, centre);
 }

@@ -37,6 +37,9 @@ class Panel {
   const std::vector<Flag>& flags() const;
   const std::vector<HorizonAlert>& alerts() const;
 
+  // Share of the values of a channel in the memory of horizon h that were observed, in [0, 1].
+  double coverage(Index h, Index channel) const;
+
   // Writes the current scatter (p x p) and centre (p) of horizon h. False, with both untouched,
   // while it has none (warming, or never live). O(p^2) to O(p^3).
   bool scatter(Index h, Eigen::MatrixXd& scatter, Eigen::VectorXd& centre) const;

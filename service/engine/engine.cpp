@@ -105,12 +105,13 @@ Refusal Engine::Body::check(const SampleEvent& event, std::vector<double>& chang
                   "has " + std::to_string(event.values.size()) + " values",
                   "one for each of the " + std::to_string(count) + " channels");
   }
+  std::size_t missing = 0;
   for (std::size_t k = 0; k < count; ++k) {
     const double x = event.values[k];
     const std::string& name = settings.channels[k].name;
-    if (std::isnan(x)) {
-      return refuse(RefusalReason::missing, name, "the value is missing",
-                    "a finite number (this version does not take missing values)");
+    if (std::isnan(x)) {  // missing
+      ++missing;
+      continue;
     }
     if (std::isinf(x)) {
       return refuse(RefusalReason::not_finite, name, "the value is infinite", "a finite number");
@@ -120,6 +121,10 @@ Refusal Engine::Body::check(const SampleEvent& event, std::vector<double>& chang
                     "the value " + number(x) + " is out of range",
                     "0, or a size from 1e-150 to 1e150");
     }
+  }
+  if (missing == count) {
+    return refuse(RefusalReason::missing, "sample", "every value is missing",
+                  "at least one finite number");
   }
   if (sequence > 0 && event.time_ns < last_time_ns) {
     return refuse(RefusalReason::time_backwards, "time",
@@ -185,6 +190,8 @@ void Engine::Body::push(const SampleEvent& event, const std::vector<double>& cha
     for (std::size_t j = 0; j < which.size(); ++j) {
       inputs[k](static_cast<Index>(j)) = change[which[j]];
     }
+    // A panel of which nothing was observed has nothing to say about this sample.
+    if (inputs[k].array().isNaN().all()) continue;
     panels[k].push(inputs[k], event.time_ns);
     for (Index h = 0; h < panels[k].horizons(); ++h) {
       EstimateRecord record;
@@ -196,6 +203,11 @@ void Engine::Body::push(const SampleEvent& event, const std::vector<double>& cha
       record.estimate = panels[k].estimate(h);
       for (const Flag& flag : panels[k].flags()) record.flagged |= flag.horizon == h;
       if (!std::isnan(record.estimate.p_value)) ++scored[k][static_cast<std::size_t>(h)];
+      if (record.estimate.coverage < 1) {
+        for (Index j = 0; j < panels[k].channels(); ++j) {
+          record.channel_coverage.push_back(panels[k].coverage(h, j));
+        }
+      }
       if (matrices.wants(sequence, record.flagged)) fill_matrices(k, h, record);
       actions.records.emplace_back(std::move(record));
     }

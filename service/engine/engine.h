@@ -41,7 +41,7 @@ enum class RefusalReason : std::uint32_t {
   none = 0,
   wrong_count = 1,     // not one value per channel
   not_finite = 2,      // an infinite value
-  missing = 3,         // a missing value while missing entries are not supported
+  missing = 3,         // every value is missing
   time_backwards = 4,  // earlier than the last accepted sample
   not_positive = 5,    // a level <= 0 that is to enter as a log difference
   out_of_range = 6,    // |value| above 1e150, or between 0 and 1e-150

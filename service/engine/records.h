@@ -30,7 +30,9 @@ struct EstimateRecord {
   std::uint32_t channels_version = 1;
   bool flagged = false;  // a flag of this horizon follows
   Estimate estimate;
-  std::vector<double> centre;   // p, empty when the horizon has no scatter yet
+  std::vector<double> centre;  // p, empty when the horizon has no scatter yet
+  // Share of each channel's values in the memory that were observed; empty when all were.
+  std::vector<double> channel_coverage;
   std::vector<double> scatter;  // p(p+1)/2, lower triangle by rows, empty likewise
 };
 

@@ -246,6 +246,9 @@ void RecordLines::append(const EstimateRecord& record, bool matrices, std::strin
   put(",\"distance\":", of_fit(e.distance), out);
   put(",\"p_value\":", of_fit(e.p_value), out);
   put(",\"coverage\":", e.coverage, out);
+  if (!record.channel_coverage.empty()) {
+    put_array(",\"channel_coverage\":", record.channel_coverage, true, out);
+  }
   put(",\"condition\":", of_fit(e.condition), out);
   out += record.flagged ? ",\"flagged\":true}\n" : ",\"flagged\":false}\n";
 }

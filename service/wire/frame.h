@@ -42,6 +42,7 @@ constexpr std::uint16_t kLastKind = 12;
 // Bits of Header::flags.
 constexpr std::uint32_t kFlagged = 1;   // estimate: this sample is flagged
 constexpr std::uint32_t kMatrices = 2;  // estimate: centre and scatter follow
+constexpr std::uint32_t kCoverage = 8;  // estimate: coverage of each channel follows
 constexpr std::uint32_t kDurable = 4;   // ack: what is acknowledged survives a crash
 
 struct Header {

@@ -136,9 +136,11 @@ std::string encode_estimate(const EstimateRecord& record, const PanelDescription
   }
   for (const double value : record.centre) append(payload, value);
   for (const double value : record.scatter) append(payload, value);
+  for (const double value : record.channel_coverage) append(payload, value);
   Header header;
   header.kind = Kind::estimate;
-  header.flags = (record.flagged ? kFlagged : 0) | (record.scatter.empty() ? 0 : kMatrices);
+  header.flags = (record.flagged ? kFlagged : 0) | (record.scatter.empty() ? 0 : kMatrices) |
+                 (record.channel_coverage.empty() ? 0 : kCoverage);
   header.epoch = epoch;
   header.sequence = record.sequence;
   header.time_ns = record.time_ns;
@@ -152,7 +154,9 @@ std::string encode_estimate(const EstimateRecord& record, const PanelDescription
 Result<EstimateRecord> decode_estimate(const View& view) {
   const std::size_t p = view.header.channels;
   const bool matrices = (view.header.flags & kMatrices) != 0;
-  const std::size_t expected = kFixedBytes + (matrices ? 8 * (p + p * (p + 1) / 2) : 0);
+  const bool coverage = (view.header.flags & kCoverage) != 0;
+  const std::size_t expected =
+      kFixedBytes + (matrices ? 8 * (p + p * (p + 1) / 2) : 0) + (coverage ? 8 * p : 0);
   if (view.header.kind != Kind::estimate || view.payload.size() != expected) {
     return wrong("is not an estimate of " + std::to_string(p) + " channels",
                  std::to_string(expected) + " payload bytes");
@@ -189,6 +193,10 @@ Result<EstimateRecord> decode_estimate(const View& view) {
     std::memcpy(record.centre.data(), view.payload.data() + kFixedBytes, 8 * p);
     std::memcpy(record.scatter.data(), view.payload.data() + kFixedBytes + 8 * p,
                 8 * record.scatter.size());
+  }
+  if (coverage) {
+    record.channel_coverage.resize(p);
+    std::memcpy(record.channel_coverage.data(), view.payload.data() + expected - 8 * p, 8 * p);
   }
   return record;
 }

@@ -157,7 +157,7 @@ TEST(Engine, RefusalsLeaveNoTraceInAnyRecord) {
        "sample: has 2 values; one for each of the 3 channels"},
       {RefusalReason::wrong_count, {}, 0, "sample: has 0 values"},
       {RefusalReason::not_finite, {1, -kInfinity, 3}, 0, "rate: the value is infinite"},
-      {RefusalReason::missing, {kNaN, 2, 3}, 0, "price: the value is missing"},
+      {RefusalReason::missing, {kNaN, kNaN, kNaN}, 0, "sample: every value is missing"},
       {RefusalReason::time_backwards, {1, 2, 3}, -5000, "time: "},
       {RefusalReason::not_positive, {0, 2, 3}, 0, "price: level 0 has no logarithm"},
       {RefusalReason::not_positive, {-4, 2, 3}, 0, "price: level -4 has no log"},
@@ -232,10 +232,33 @@ TEST(Engine, AcknowledgesDuplicatesAgainAndSendsGapsBack) {
   EXPECT_EQ(engine.sequence(), 60U);
 }
 
+TEST(Engine, TakesMissingValuesAndSaysWhatWasObserved) {
+  Engine engine(settings());
+  Actions actions;
+  for (int t = 0; t < 120; ++t) {
+    std::vector<double> values = {100 + std::sin(t * 1.3), std::cos(t * 2.1), std::sin(t * t * .7)};
+    if (t % 5 == 4) values[1] = kNaN;
+    engine.step({"", 0, t, values}, actions);
+    ASSERT_TRUE(actions.accepted) << actions.refusal.fault.line();
+  }
+  bool seen = false;
+  for (const Record& record : actions.records) {
+    const auto* estimate = std::get_if<EstimateRecord>(&record);
+    if (estimate == nullptr || estimate->channel_coverage.empty()) continue;
+    seen = true;
+    EXPECT_LT(estimate->estimate.coverage, 1);
+    double sum = 0;
+    for (const double share : estimate->channel_coverage) sum += share;
+    EXPECT_NEAR(sum / static_cast<double>(estimate->channel_coverage.size()),
+                estimate->estimate.coverage, 1e-12);
+  }
+  EXPECT_TRUE(seen);
+}
+
 TEST(Engine, ARefusedSampleUsesUpItsSequenceSoThatTheSenderCanGoOn) {
   Engine engine(settings());
   Actions actions;
-  engine.step({"a", 1, 0, {1, kNaN, 1}}, actions);
+  engine.step({"a", 1, 0, {kNaN, kNaN, kNaN}}, actions);
   EXPECT_EQ(actions.refusal.reason, RefusalReason::missing);
   EXPECT_EQ(engine.next_of("a"), 2U);
   EXPECT_EQ(engine.sequence(), 0U);

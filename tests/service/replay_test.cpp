@@ -134,12 +134,12 @@ TEST_F(ReplayProgram, NeverOverwritesUnlessToldTo) {
 }
 
 TEST_F(ReplayProgram, EndsAtTheFirstRefusedSampleOrCountsThem) {
-  write("bad.csv", "time,a,b\n1,1,2\n2,,2\n3,1,2\n4,1e200,2\n5,2,1\n");
+  write("bad.csv", "time,a,b\n1,1,2\n2,,NA\n3,1,2\n4,1e200,2\n5,2,1\n");
   const Outcome ended = replay("", "bad.csv");
   EXPECT_EQ(ended.code, 65);
   EXPECT_EQ(ended.output, "tailweir: " + at("bad.csv") +
-                              ":3: a: the value is missing; a finite number (this version does "
-                              "not take missing values) (or add --keep-going)\n");
+                              ":3: sample: every value is missing; at least one finite number "
+                              "(or add --keep-going)\n");
   EXPECT_EQ(estimates().size(), 2U) << "what came before stays";
   const Outcome counted = replay("--keep-going --overwrite", "bad.csv");
   EXPECT_EQ(counted.code, 0);

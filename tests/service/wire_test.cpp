@@ -239,7 +239,7 @@ TEST(IntakeDesk, RefusesValuesThatAreNotFinite) {
   const double bad[3] = {std::nan(""), std::numeric_limits<double>::infinity(), 1e200};
   for (std::uint64_t k = 0; k < 3; ++k) {
     const auto answers = desk.from_peer(
-        "x", encode_samples({{k + 1, 1, {1, bad[k]}}}, 2, channels_hash({"a", "b"}), 0));
+        "x", encode_samples({{k + 1, 1, {bad[k], bad[k]}}}, 2, channels_hash({"a", "b"}), 0));
     ASSERT_EQ(answers.size(), 2u);
     EXPECT_EQ(decode_refusal(decode(answers[0]).value()).value().sequence, k + 1);
   }
