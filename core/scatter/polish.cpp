@@ -11,9 +11,9 @@
 namespace tailweir {
 namespace {
 
-// Multiply-adds of one step: about half a millisecond of BLAS on a present core, so that a step and
-// the sample's own pass stay below 2 ms also at p = 300 on a slow one.
-constexpr double kStepWork = 4e6;
+// Multiply-adds of one step: about a quarter of a millisecond of BLAS on a present core, so that a
+// step and the sample's own pass stay below 2 ms also at p = 300 on a slow one.
+constexpr double kStepWork = 2e6;
 // Widest block of columns: beyond it BLAS gains nothing more.
 constexpr Index kWidestBlock = 256;
 
@@ -63,6 +63,10 @@ void Polish::step(SampleRing& ring, const Eigen::MatrixXd& tail) {
   switch (stage_) {
     case Stage::factor:
       return factor();
+    case Stage::condition:
+      estimate_condition();
+      stage_ = Stage::samples;
+      return;
     case Stage::samples:
       samples(ring);
       if (cursor_ == last_) stage_ = tail.size() > 0 ? Stage::tail : Stage::judge;
@@ -88,8 +92,7 @@ void Polish::factor() {
     return;
   }
   log_det_ = -2 * factor_.diagonal().array().log().sum();
-  estimate_condition();
-  stage_ = Stage::samples;
+  stage_ = Stage::condition;
 }
 
 // Power iteration for the largest eigenvalues of P and of P^-1, from where the last one ended.

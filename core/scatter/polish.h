@@ -35,7 +35,19 @@ struct PolishStart {
 
 class Polish {
  public:
-  enum class Stage { idle, factor, samples, tail, judge, solve, form, replay, done, failed };
+  enum class Stage {
+    idle,
+    factor,
+    condition,
+    samples,
+    tail,
+    judge,
+    solve,
+    form,
+    replay,
+    done,
+    failed
+  };
 
   // dimension D; lift 1 when the constant is the last component.
   Polish(Index dimension, Index lift);

@@ -77,12 +77,14 @@ class SampleRing {
   }
 
  private:
-  Index slot(std::int64_t position) const { return static_cast<Index>(position % capacity_); }
+  Index slot(std::int64_t position) const { return static_cast<Index>(position & (capacity_ - 1)); }
   std::size_t at(std::int64_t position) const { return static_cast<std::size_t>(slot(position)); }
 
   void resize(Index capacity) {
-    capacity_ = capacity;
-    const std::size_t n = static_cast<std::size_t>(capacity);
+    // A power of two, so that a position finds its slot without a division.
+    capacity_ = 1;
+    while (capacity_ < capacity) capacity_ *= 2;
+    const std::size_t n = static_cast<std::size_t>(capacity_);
     x_.assign(n * static_cast<std::size_t>(rows_), 0.0);
     omega_.assign(n, 0.0);
     weight_[0].assign(n, 0.0);
@@ -94,7 +96,7 @@ class SampleRing {
 
   // Doubles the room; samples keep their positions.
   void grow() {
-    SampleRing bigger(rows_, 2 * (capacity_ - slack_), slack_);
+    SampleRing bigger(rows_, 2 * capacity_ - slack_, slack_);
     const std::int64_t from = end_ > capacity_ ? end_ - capacity_ : 0;
     bigger.begin_ = begin_;
     bigger.end_ = end_;
