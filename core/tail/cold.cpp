@@ -47,7 +47,13 @@ NuEstimate cold_leave_one_out(const Window& window, bool censored) {
   double nu0 = 5;
   Eigen::MatrixXd start;
   NuEstimate estimate = nothing(window.settings);
-  for (int pass = 0; pass < 2; ++pass) {
+  // Two passes. Where the light-tail moment leads, a third at the blended nu, the fit that a stream
+  // would be at: without it the mean square error at p/n >= .5 and nu = 10 is a tenth larger.
+  for (int pass = 0; pass < 3; ++pass) {
+    if (pass == 2) {
+      if (censored || heavy_tail_share(estimate.unblended) >= .5) break;
+      nu0 = std::clamp(estimate.nu, 2., 50.);
+    }
     const FixedPoint fit = fit_at(window, nu0, start);
     if (fit.reason != StopReason::converged) return nothing(window.settings);
     const FitView view = view_of(window, fit, nu0);

@@ -63,8 +63,11 @@ NuEstimate degenerate(const NuSettings& settings, const NuEstimate* previous) {
   return estimate;
 }
 
-// Blend weight of the unblended estimate: 1 below nu = 4, 0 above nu = 8, linear in 1/nu between.
-double tail_share(double nu) { return std::clamp((1 / nu - 1. / 8) * 8, 0., 1.); }
+bool blend_applies(const FitView& fit, const ScaledF& data) {
+  const double p = static_cast<double>(fit.channels);
+  if (data.equal) return p <= .75 * static_cast<double>(data.n);
+  return p * fit.mass.maxCoeff() <= .3;
+}
 
 void finish(const NuSettings& settings, double samples, NuEstimate& estimate) {
   const double information =
@@ -85,12 +88,6 @@ void finish(const NuSettings& settings, double samples, NuEstimate& estimate) {
   } else if (estimate.nu < 30 && !(estimate.standard_error_log <= 1)) {
     estimate.status = NuStatus::not_identified;
   }
-}
-
-bool blend_applies(const FitView& fit, const ScaledF& data) {
-  const double p = static_cast<double>(fit.channels);
-  if (data.equal) return p <= .6 * static_cast<double>(data.n);
-  return p * fit.mass.maxCoeff() <= .3;
 }
 
 // No log posterior that is not a number, and a finite largest one.
@@ -122,6 +119,8 @@ bool fill_around(const NuEstimate* previous, const ScaledF& data, Eigen::ArrayXd
 
 }  // namespace
 
+double heavy_tail_share(double nu) { return std::clamp((1 / nu - 1. / 10) * 10, 0., 1.); }
+
 NuEstimate leave_one_out(const FitView& fit, const NuSettings& settings, Workspace& workspace,
                          const NuEstimate* previous) {
   ScaledF data;
@@ -136,7 +135,7 @@ NuEstimate leave_one_out(const FitView& fit, const NuSettings& settings, Workspa
   estimate.effective_channels = data.p;
   summarise(workspace.log_posterior, estimate);
   estimate.nu = estimate.unblended;
-  const double share = tail_share(estimate.unblended);
+  const double share = heavy_tail_share(estimate.unblended);
   if (share < 1 && blend_applies(fit, data)) {
     const double moment = light_tail_moment(fit, estimate.unblended);
     estimate.nu = 1 / (1 / moment + share * (1 / estimate.unblended - 1 / moment));

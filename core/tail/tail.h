@@ -72,6 +72,11 @@ double grid_nu(Index k);
 NuEstimate leave_one_out(const FitView& fit, const NuSettings& settings, Workspace& workspace,
                          const NuEstimate* previous = nullptr);
 
+// Weight of the unblended estimate in the blend: 1 for nu <= 5, 0 from nu = 10, linear in 1/nu.
+// Chosen in the nu study (tests/bench/nu_study.cpp, core/tail/README.md): of the switches between
+// 3-6 and 8-12 the one with the least mean square error at nu = 3..6 that costs under 2% at 10.
+double heavy_tail_share(double nu);
+
 // Same pass with delta above its weighted (1 - f) quantile censored, f = 0.05: what nu would be if
 // the largest distances were outliers rather than tail. No blend.
 NuEstimate leave_one_out_censored(const FitView& fit, const NuSettings& settings,

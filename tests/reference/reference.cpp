@@ -104,7 +104,7 @@ Posterior leave_one_out(const Fit& fit, const Eigen::ArrayXd& mass, Eigen::Index
   // Light-tail moment and blend, equal masses or small ones.
   const bool equal = v.maxCoeff() == v.minCoeff();
   result.blended = result.nu;
-  if (!(equal ? p / static_cast<double>(n) <= .6 : p * v.maxCoeff() <= .3)) return result;
+  if (!(equal ? p / static_cast<double>(n) <= .75 : p * v.maxCoeff() <= .3)) return result;
   double glow = 1, ghigh = 1e9;
   for (int j = 0; j < 300; ++j) {
     const double g = std::sqrt(glow * ghigh);
@@ -128,7 +128,7 @@ Posterior leave_one_out(const Fit& fit, const Eigen::ArrayXd& mass, Eigen::Index
     m = next;
     if (done) break;
   }
-  const double share = std::min(std::max((1 / result.nu - .125) / .125, 0.), 1.);
+  const double share = std::min(std::max((1 / result.nu - .1) / .1, 0.), 1.);
   result.blended = 1 / (1 / m + share * (1 / result.nu - 1 / m));
   return result;
 }
