@@ -5,40 +5,15 @@
 #include <cmath>
 #include <limits>
 
+#include "core/scatter/tracker_internal.h"
 #include "core/scatter/weight.h"
 #include "core/spd/blas.h"
 
 namespace tailweir {
+
+using namespace tracker_internal;
+
 namespace {
-
-constexpr double kNaN = std::numeric_limits<double>::quiet_NaN();
-// A scaled sample beyond this enters at this size in the same direction: u(d) x x' no longer
-// depends on the length there (relative difference nu/d), and nothing overflows.
-constexpr double kAbsurd = 1e30;
-// Condition number (scaled channels) beyond which a scatter is not published.
-constexpr double kWorstCondition = 1e12;
-// Whole iterations allowed at one sample: in exact mode, otherwise.
-constexpr int kExactIterations = 80;
-constexpr int kIterations = 3;
-// Samples a half-life keeps by default: 2 n_eff = 4/ln 2 half-lives.
-constexpr double kKeptHalfLives = 5.7707801635558535;
-// Work (multiply-adds) up to which a polish is done at one sample: under a millisecond.
-constexpr double kOneGo = 8e6;
-// Share of the statistical error below which a tolerance means exact at every sample.
-constexpr double kExactShare = .02;
-
-bool is_half_life(Memory::Kind kind) {
-  return kind == Memory::Kind::half_life_samples || kind == Memory::Kind::half_life_time;
-}
-
-double error_for(double p, double nu, double n) {
-  const double sigma1 = (p + nu + 2) / (p + nu);
-  const double sigma2 = 2 * (p + nu + 2) / (nu * (p + nu));
-  return std::sqrt((sigma1 * p * (p + 1) + sigma2 * p) / n);
-}
-
-// What the first iteration after some drift leaves of the distance (tests/bench, drift table).
-double first_contraction(double p, bool half_life) { return (half_life ? .65 : 1.) / (6 + p / 11); }
 
 double kept_half_lives(const TrackerSettings& settings, double nu) {
   if (!is_half_life(settings.memory.kind)) return 0;
@@ -67,18 +42,6 @@ Index slack_for(Index dimension, Index room) {
   const double work = Polish::cost(dimension, room, true);
   if (work <= kOneGo) return 1;
   return static_cast<Index>(16 + 6 * work / 2e6);
-}
-
-// a <- a + scale f C C' on the missing entries, lower triangle.
-void add_conditional(const PartialSample& partial, double scale, Eigen::MatrixXd& a) {
-  const Eigen::MatrixXd part = scale * partial.f * partial.factor * partial.factor.transpose();
-  const Index m = static_cast<Index>(partial.missing.size());
-  for (Index k = 0; k < m; ++k) {
-    for (Index l = k; l < m; ++l) {  // missing rises: (l, k) is in the lower triangle
-      a(partial.missing[static_cast<std::size_t>(l)],
-        partial.missing[static_cast<std::size_t>(k)]) += part(l, k);
-    }
-  }
 }
 
 }  // namespace
@@ -485,148 +448,6 @@ void Tracker::retire_tail() {
   if (count > 0) spd::add_gram(1, columns_.leftCols(count), 1, tail_);
 }
 
-void Tracker::start_if_ready() {
-  const double d = static_cast<double>(dimension_);
-  const double n = mass_square_ > 0 ? mass_ * mass_ / mass_square_ : 0;
-  const bool bounded = settings_.memory.kind == Memory::Kind::window_samples ||
-                       settings_.memory.kind == Memory::Kind::half_life_samples;
-  const double most = bounded ? .9 * steady_samples() : 3 * d;
-  if (n < std::max(std::min(3 * d, most), d + 1) - 1e-9) {
-    state_ = TrackerState::filling;
-    return;
-  }
-  if (--retry_in_ > 0) return;
-  retry_in_ = std::max<std::int64_t>(1, ring_.size() / 16);
-  health_.samples_effective = n;
-  choose_units();
-  const double nu = nu_ - static_cast<double>(lift_);
-  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
-    const Eigen::Map<const Eigen::VectorXd> x(ring_.x(k), dimension_);
-    ring_.weight(k, current_) = (d + nu) / (nu + x.squaredNorm());
-    PartialSample& partial = ring_.partial(k);
-    if (partial.missing.empty()) continue;
-    // Before anything is known: the centre of the channel, with the spread its unit stands for.
-    const Index m = static_cast<Index>(partial.missing.size());
-    for (const Index j : partial.missing) ring_.x(k)[j] = 0;
-    partial.factor = Eigen::MatrixXd::Identity(m, m) * std::sqrt(2.);
-    partial.f = ring_.omega(k);
-  }
-  tail_total_ = tail_mass_ = tail_square_ = 0;
-  if (tail_.size() > 0) tail_.setZero();
-  recount();
-  state_ = TrackerState::tracking;
-  if (!build()) return;
-  ++health_.rebuilds;
-  for (int k = 0; k < kExactIterations; ++k) {
-    if (!iterate()) return;
-    if (health_.residual_at_polish * .3 <= std::min(tolerance(), .01 * statistical_error())) return;
-  }
-  if (health_.residual_at_polish > statistical_error()) fail(TrackerState::not_converged);
-}
-
-// Power-of-two units and an offset from the medians of the ring, and the ring rewritten in them.
-void Tracker::choose_units() {
-  const Index n = ring_.size();
-  if (static_cast<Index>(scratch_values_.size()) < n)
-    scratch_values_.resize(2 * static_cast<std::size_t>(n));
-  const auto first = scratch_values_.begin();
-  for (Index j = 0; j < p_; ++j) {
-    const double old_unit = unit_(j);
-    const double old_offset = offset_(j);
-    double size = 0;
-    Index seen = 0;
-    for (Index k = 0; k < n; ++k) {
-      const std::vector<Index>& missing = ring_.partial(ring_.begin() + k).missing;
-      if (std::find(missing.begin(), missing.end(), j) != missing.end()) continue;
-      first[seen++] = ring_.x(ring_.begin() + k)[j] * old_unit + old_offset;
-    }
-    if (seen == 0) continue;  // never observed: stays as it is
-    const auto middle = first + seen / 2;
-    const auto last = first + seen;
-    if (lift_ == 1) {
-      std::nth_element(first, middle, last);
-      offset_(j) = *middle;
-    }
-    double sum = 0;
-    for (auto value = first; value != last; ++value) {
-      *value = std::abs(*value - offset_(j));
-      sum += *value / static_cast<double>(seen);
-    }
-    std::nth_element(first, middle, last);
-    size = *middle > 0 ? *middle : sum;
-    unit_(j) = size > 0 && std::isfinite(size)
-                   ? std::exp2(std::clamp(std::floor(std::log2(size)), -480., 500.))
-                   : 1;
-    for (Index k = 0; k < n; ++k) {
-      double& value = ring_.x(ring_.begin() + k)[j];
-      value = (value * old_unit + (old_offset - offset_(j))) / unit_(j);
-    }
-  }
-  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {  // see kAbsurd
-    Eigen::Map<Eigen::VectorXd> x(ring_.x(k), p_);
-    const double largest = x.cwiseAbs().maxCoeff();
-    if (largest > kAbsurd) x *= kAbsurd / largest;
-  }
-}
-
-// A, P, W and ln det A from the ring's weights and E. On failure the tracker says why and stops.
-bool Tracker::build() {
-  polish_.abandon();
-  rebuild_wanted_ = false;
-  recount();
-  const double normal = total_ > 0 && mass_ > 0 && tail_mass_ > 0 ? total_ / mass_ : 1;
-  scratch_.setZero();
-  if (tail_.size() > 0 && tail_mass_ > 0) scratch_ = normal * tail_;
-  total_ = normal * tail_total_;
-  Index count = 0;
-  for (std::int64_t k = ring_.begin(); k < ring_.end(); ++k) {
-    const double a = ring_.omega(k) * ring_.weight(k, current_);
-    total_ += a;
-    if (ring_.partial(k).f > 0) add_conditional(ring_.partial(k), 1, scratch_);
-    columns_.col(count++) =
-        std::sqrt(a) * Eigen::Map<const Eigen::VectorXd>(ring_.x(k), dimension_);
-    if (count == columns_.cols() || k + 1 == ring_.end()) {
-      spd::add_gram(1, columns_.leftCols(count), 1, scratch_);
-      count = 0;
-    }
-  }
-  if (!(total_ > 0) || !std::isfinite(total_) || !spd::cholesky(scratch_)) {
-    fail(TrackerState::not_positive_definite);
-    return false;
-  }
-  double least = 1;
-  for (Index j = 0; j < dimension_; ++j) {
-    least = std::min(least, scratch_(j, j) / scratch_.row(j).head(j + 1).norm());
-  }
-  if (!(least > 1e-7)) {  // spans fewer than p dimensions, but for rounding
-    fail(TrackerState::not_positive_definite);
-    return false;
-  }
-  log_det_ = 2 * scratch_.diagonal().array().log().sum();
-  spd::inverse_from_cholesky(scratch_);
-  precision_.assign(scratch_);
-  health_.since_polish = 0;
-  return true;
-}
-
-void Tracker::rebuild() {
-  ++health_.rebuilds;
-  if (!build()) return;
-  for (int k = 0; k < (exact() ? kExactIterations : kIterations); ++k) {
-    if (!iterate()) return;
-    if (after_ <= tolerance()) return;
-  }
-}
-
-void Tracker::fail(TrackerState state) {
-  state_ = state;
-  polish_.abandon();
-  rebuild_wanted_ = false;
-  health_.iterations = 0;
-  view_size_ = 0;
-  retry_in_ = std::max<std::int64_t>(1, ring_.size() / 16);
-}
-
 void Tracker::polish_if_due() {
   if (polish_.active()) {
     polish_.step(ring_, tail_);
@@ -784,86 +605,6 @@ bool Tracker::polish_now() {
   const bool ok = iterate();
   update_health();
   return ok;
-}
-
-double Tracker::ring_share() const { return mass_ > 0 ? 1 - tail_mass_ / mass_ : 1; }
-
-void Tracker::view_sample(Index k, Eigen::Ref<Eigen::VectorXd> x) const {
-  const Eigen::Map<const Eigen::VectorXd> scaled(ring_.x(view_first_ + k), p_);
-  x = scaled.cwiseProduct(unit_) + offset_;
-}
-
-void Tracker::residuals(Eigen::Ref<Eigen::VectorXd> q,
-                        Eigen::Ref<Eigen::VectorXd> precision_diagonal) const {
-  assert(tracking());
-  for (Index j = 0; j < p_; ++j) {
-    q(j) = total_ * y_[static_cast<std::size_t>(j)] / (unit_(j) * shrink_);
-    precision_diagonal(j) = precision_.entry(j, j);
-  }
-  if (!missing_now_.empty()) {  // P_jj less what the missing ones explain
-    const Eigen::Ref<const Eigen::MatrixXd> v = missing_.update();
-    for (Index j = 0; j < p_; ++j) precision_diagonal(j) -= v.row(j).squaredNorm();
-  }
-  for (Index j = 0; j < p_; ++j) precision_diagonal(j) *= total_ / (unit_(j) * unit_(j));
-  for (const Index j : missing_now_) precision_diagonal(j) = 1;
-}
-
-void Tracker::centred(Eigen::Ref<Eigen::VectorXd> x) const {
-  for (Index j = 0; j < p_; ++j) x(j) = x_[static_cast<std::size_t>(j)] * unit_(j) / shrink_;
-  if (lift_ == 0) return;
-  // m - offset = -S (W P e_p): one solve with the leading block.
-  precision_.copy_to(scratch_);
-  block_ = scratch_.topLeftCorner(p_, p_);
-  if (!spd::cholesky(block_)) return;
-  column_ = -scratch_.row(p_).head(p_).transpose();
-  spd::solve(block_, column_);
-  spd::solve_transposed(block_, column_);
-  x -= unit_.cwiseProduct(column_.col(0));
-}
-
-void Tracker::centred_roughly(Eigen::Ref<Eigen::VectorXd> x) const {
-  for (Index j = 0; j < p_; ++j) {
-    x(j) = (x_[static_cast<std::size_t>(j)] - shift_(j)) * unit_(j) / shrink_;
-  }
-}
-
-bool Tracker::scatter(Eigen::MatrixXd& s, Eigen::VectorXd& m) const {
-  if (tracking()) {
-    precision_.settle();
-    precision_.copy_to(scratch_);
-    if (form_scatter(scratch_, total_, offset_, unit_, s, m)) return true;
-  }
-  return good_total_ > 0 && form_scatter(good_, good_total_, good_offset_, good_unit_, s, m);
-}
-
-// S and m from P, when they come out positive definite with digits to spare.
-bool Tracker::form_scatter(const Eigen::MatrixXd& precision, double total,
-                           const Eigen::VectorXd& offset, const Eigen::VectorXd& unit,
-                           Eigen::MatrixXd& s, Eigen::VectorXd& m) const {
-  block_ = precision.topLeftCorner(p_, p_);
-  if (!spd::cholesky(block_)) return false;
-  column_.setZero();
-  if (lift_ == 1) {
-    column_ = -precision.row(p_).head(p_).transpose();
-    spd::solve(block_, column_);
-    spd::solve_transposed(block_, column_);
-  }
-  spd::inverse_from_cholesky(block_);
-  block_ /= total;
-  check_ = block_;
-  if (!spd::cholesky(check_)) return false;
-  for (Index j = 0; j < p_; ++j) {
-    if (!(check_(j, j) > 1e-7 * check_.row(j).head(j + 1).norm())) return false;
-    for (Index i = j; i < p_; ++i) block_(i, j) *= unit(i) * unit(j);
-    // Next to the ends of the number range a factorisation loses its digits.
-    if (!(block_(j, j) > 1e-290 && block_(j, j) < 1e300)) return false;
-  }
-  spd::mirror_lower(block_);
-  column_.col(0) = column_.col(0).cwiseProduct(unit) + offset;
-  if (!block_.allFinite() || !column_.allFinite()) return false;
-  s = block_;
-  m = column_.col(0);
-  return true;
 }
 
 }  // namespace tailweir
