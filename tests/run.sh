@@ -1,15 +1,16 @@
 #!/bin/sh
 # Installs what is needed (Debian 12), builds, runs the tests.
-#   sh tests/run.sh [--slow] [--preset NAME] [CTEST ARGUMENTS...]
-# --slow adds the tests labelled slow; --preset takes deploy/presets/NAME.cmake (asan, tsan, ...).
+#   sh tests/run.sh [--slow | --brief] [--preset NAME] [CTEST ARGUMENTS...]
+# --slow adds the tests labelled slow, --brief leaves out the statistical ones; --preset takes deploy/presets/NAME.cmake (asan, tsan, ...).
 set -eu
 root=$(cd "$(dirname "$0")/.." && pwd)
 . "$root/deploy/common.sh"
 preset=release
-slow=no
+excluded=slow
 while [ $# -gt 0 ]; do
   case $1 in
-    --slow) slow=yes ;;
+    --slow) excluded=none ;;
+    --brief) excluded='slow|statistical' ;;
     --preset)
       shift
       preset=${1:?--preset needs a name}
@@ -30,7 +31,4 @@ need "build test"
 say "tailweir: building (some minutes the first time)"
 build "$root/build/$preset" -C "$root/deploy/presets/$preset.cmake" -DTAILWEIR_TESTS=ON
 cd "$root/build/$preset"
-if [ "$slow" = no ]; then
-  set -- --label-exclude slow "$@"
-fi
-exec ctest --output-on-failure -j "$(nproc)" "$@"
+exec ctest --output-on-failure -j "$(nproc)" --label-exclude "$excluded" "$@"
