@@ -1,7 +1,8 @@
 #!/bin/sh
 # Installs what is needed (Debian 12), builds, runs the tests.
 #   sh tests/run.sh [--slow | --brief] [--preset NAME] [CTEST ARGUMENTS...]
-# --slow adds the tests labelled slow, --brief leaves out the statistical ones; --preset takes deploy/presets/NAME.cmake (asan, tsan, ...).
+# --slow adds the tests labelled slow, --brief leaves out the statistical ones;
+# --preset takes deploy/presets/NAME.cmake (asan, tsan, ...).
 set -eu
 root=$(cd "$(dirname "$0")/.." && pwd)
 . "$root/deploy/common.sh"

@@ -8,6 +8,7 @@
 #include <cmath>
 #include <map>
 
+#include "core/student/student.h"
 #include "tests/oracles/r_data.h"
 
 namespace tailweir {
@@ -149,12 +150,16 @@ TEST(Panel, DistancesOfPlantedRowsMatchR) {
   for (Index t = 0; t < x.cols(); ++t) panel.push(x.col(t), t);
   const Index rows[5] = {35, 204, 318, 1223, 1651};
   const double d2[5] = {206.7311524, 118.1983045, 110.5811636, 92.12284179, 76.38383209};
+  const double p_value[5] = {.001067217574, .003144333246, .003570983961, .005050907725,
+                             .007182110306};
   Eigen::MatrixXd s;
   Eigen::VectorXd m;
   ASSERT_TRUE(panel.scatter(0, s, m));
   for (int k = 0; k < 5; ++k) {
     const Eigen::VectorXd c = x.col(rows[k] - 1) - m;
-    EXPECT_NEAR(c.dot(s.inverse() * c) / d2[k], 1, 1e-8);
+    const double d = c.dot(s.inverse() * c);
+    EXPECT_NEAR(d / d2[k], 1, 1e-8);
+    EXPECT_NEAR(student::tail_probability(d, 4, 4) / p_value[k], 1, 1e-8);
   }
   EXPECT_NEAR(8 * panel.estimate(0).log_volatility, -4.474637453, 1e-8);
 }
