@@ -96,6 +96,10 @@ std::string panel_text(const PanelSettings& panel) {
   text += "  shrinkage           " + shrinkage_text(panel.shrinkage) + "\n";
   text += "  flags               one sample in " + plain(1 / panel.flags.rate) +
           ", severe one in " + plain(1 / panel.flags.severe_rate) + ", when nothing is wrong\n";
+  text += panel.alerts.on ? "  alerts              one false in " +
+                                plain(panel.alerts.mean_samples_between_false) +
+                                " samples of a horizon, all kinds together\n"
+                          : "  alerts              none\n";
   for (const HorizonSettings& horizon : panel.horizons) {
     text += "  horizon " + horizon.name + ": " + memory_text(horizon.memory) + "; tolerance " +
             (horizon.tolerance ? plain(*horizon.tolerance) : "a fifth of the statistical error") +
