@@ -8,6 +8,7 @@
 #include <cmath>
 #include <cstdio>
 #include <cstdlib>
+#include <map>
 #include <nlohmann/json.hpp>
 #include <sstream>
 
@@ -38,7 +39,7 @@ std::string eu_recording(int rows) {
   return text;
 }
 
-// Two panels, three horizons.
+// Three panels, four horizons.
 std::string eu_settings(const Folder& folder) {
   return "feed: {listen: \"ipc://" + folder.path("in") + "\"}\n" + "publish: {address: \"ipc://" +
          folder.path("out.sock") + "\"}\n" +
@@ -54,7 +55,13 @@ std::string eu_settings(const Folder& folder) {
          "  - name: pair\n"
          "    channels: [cac, dax]\n"
          "    horizons:\n"
-         "      - {name: short, window: 120}\n";
+         "      - {name: short, window: 120}\n"
+         "  - name: likelihood\n"
+         "    channels: all\n"
+         "    centre: estimated\n"
+         "    degrees_of_freedom: {estimator: likelihood}\n"
+         "    horizons:\n"
+         "      - {name: window, window: 250, tolerance: 1e-10}\n";
 }
 
 enum class Line { estimate, flag, alert };
@@ -89,7 +96,7 @@ TEST(Live, MatchesReplayToTheByteAndR) {
   const std::vector<std::string> replayed = lines_of(estimates, Line::estimate);
   const std::vector<std::string> replayed_flags = lines_of(flags, Line::flag);
   const std::vector<std::string> replayed_alerts = lines_of(alerts, Line::alert);
-  ASSERT_EQ(replayed.size(), 3u * 1859u);
+  ASSERT_EQ(replayed.size(), 4u * 1859u);
   EXPECT_FALSE(replayed_flags.empty());
   EXPECT_FALSE(replayed_alerts.empty());
 
@@ -104,7 +111,7 @@ TEST(Live, MatchesReplayToTheByteAndR) {
             0)
       << err;
   EXPECT_NE(out.find("1859 samples acknowledged"), std::string::npos) << out;
-  ASSERT_EQ(tap.wait(60), 0) << folder.read("tap.err");
+  ASSERT_EQ(tap.wait(200), 0) << folder.read("tap.err");
   const std::string live = folder.read("tap.out");
   EXPECT_EQ(lines_of(live, Line::estimate), replayed);
   EXPECT_EQ(lines_of(live, Line::flag), replayed_flags);
@@ -113,12 +120,23 @@ TEST(Live, MatchesReplayToTheByteAndR) {
   daemon.signal(SIGTERM);
   EXPECT_EQ(daemon.wait(1), 0);
 
+  int checked = 0, below = 0;
   // Figures in the live lines: S11 of the sliding window and of the half-life, a distance's
   // p-value.
   for (const std::string& line : lines_of(live, Line::estimate)) {
     const nlohmann::json record = nlohmann::json::parse(line);
     const auto sequence = record["sequence"].get<int>();
     const std::string horizon = record["horizon"];
+    if (record["panel"] == "likelihood") {
+      const std::map<int, double> nu = {
+          {600, 11.93108518}, {1320, 8.366844718}, {1859, 7.967607659}};
+      if (nu.count(sequence) > 0) {
+        EXPECT_NEAR(record["nu"].get<double>() / nu.at(sequence), 1, 1e-6) << sequence;
+        ++checked;
+      }
+      continue;
+    }
+    if (horizon == "window" && sequence > 250) below += record["p_value"].get<double>() < .05;
     if (horizon == "window" && sequence == 600) {
       EXPECT_NEAR(record["scatter"][0].get<double>() / .4155889673, 1, 1e-8);
     }
@@ -130,6 +148,8 @@ TEST(Live, MatchesReplayToTheByteAndR) {
       EXPECT_NEAR(record["centre"][0].get<double>() / .1664207936, 1, 1e-8);
     }
   }
+  EXPECT_EQ(checked, 3);
+  EXPECT_EQ(below, 44);  // .0273 of 1609 one-step forecasts (R)
 }
 
 TEST(Live, StopsWithinASecondWhileSamplesArrive) {

@@ -93,7 +93,7 @@ bool wait_for_text(const std::string& file, const std::string& text, double seco
 int run(const std::vector<std::string>& arguments, std::string& out, std::string& err) {
   const Folder folder;
   Process process(arguments, folder.path("out"), folder.path("err"));
-  const int code = process.wait(60);
+  const int code = process.wait(200);
   out = folder.read("out");
   err = folder.read("err");
   return code;
